@@ -1,0 +1,2 @@
+// Package market streams Matrix Market coordinate files (.mtx, .mtx.gz).
+package market
