@@ -374,9 +374,9 @@ func (x *Hello) GetThreads() uint32 {
 type TaskDone struct {
 	state         protoimpl.MessageState `protogen:"open.v1"`
 	Task          uint64                 `protobuf:"varint,1,opt,name=task,proto3" json:"task,omitempty"`
-	CpuSeconds    float64                `protobuf:"fixed64,2,opt,name=cpu_seconds,json=cpuSeconds,proto3" json:"cpu_seconds,omitempty"`
-	Stages        []*StageSeconds        `protobuf:"bytes,3,rep,name=stages,proto3" json:"stages,omitempty"`      // wall time by stage of prepare
-	Apparent      uint64                 `protobuf:"varint,4,opt,name=apparent,proto3" json:"apparent,omitempty"` // columns by fate, where the task settles some
+	CpuSeconds    float64                `protobuf:"fixed64,2,opt,name=cpu_seconds,json=cpuSeconds,proto3" json:"cpu_seconds,omitempty"` // of the worker since it joined
+	Stages        []*StageSeconds        `protobuf:"bytes,3,rep,name=stages,proto3" json:"stages,omitempty"`                             // wall time by stage of prepare
+	Apparent      uint64                 `protobuf:"varint,4,opt,name=apparent,proto3" json:"apparent,omitempty"`                        // columns by fate, where the task settles some
 	Graph         uint64                 `protobuf:"varint,5,opt,name=graph,proto3" json:"graph,omitempty"`
 	Cleared       uint64                 `protobuf:"varint,6,opt,name=cleared,proto3" json:"cleared,omitempty"`
 	Settled       uint64                 `protobuf:"varint,7,opt,name=settled,proto3" json:"settled,omitempty"`
@@ -384,7 +384,8 @@ type TaskDone struct {
 	Residual      uint64                 `protobuf:"varint,9,opt,name=residual,proto3" json:"residual,omitempty"` // columns left to reduce after a survey
 	Rank          uint64                 `protobuf:"varint,10,opt,name=rank,proto3" json:"rank,omitempty"`        // pairs of a sealed block
 	RowsDropped   uint64                 `protobuf:"varint,11,opt,name=rows_dropped,json=rowsDropped,proto3" json:"rows_dropped,omitempty"`
-	PeakBytes     uint64                 `protobuf:"varint,12,opt,name=peak_bytes,json=peakBytes,proto3" json:"peak_bytes,omitempty"` // highest resident set of the worker's process so far
+	PeakBytes     uint64                 `protobuf:"varint,12,opt,name=peak_bytes,json=peakBytes,proto3" json:"peak_bytes,omitempty"`       // highest resident set of the worker's process so far
+	PairsDigest   uint32                 `protobuf:"varint,13,opt,name=pairs_digest,json=pairsDigest,proto3" json:"pairs_digest,omitempty"` // of the pairs file that a graph or seal task published
 	unknownFields protoimpl.UnknownFields
 	sizeCache     protoimpl.SizeCache
 }
@@ -499,6 +500,13 @@ func (x *TaskDone) GetRowsDropped() uint64 {
 func (x *TaskDone) GetPeakBytes() uint64 {
 	if x != nil {
 		return x.PeakBytes
+	}
+	return 0
+}
+
+func (x *TaskDone) GetPairsDigest() uint32 {
+	if x != nil {
+		return x.PairsDigest
 	}
 	return 0
 }
@@ -756,7 +764,7 @@ func (x *Ready) GetRowsDropped() uint64 {
 type Counters struct {
 	state         protoimpl.MessageState `protogen:"open.v1"`
 	Reduction     uint64                 `protobuf:"varint,1,opt,name=reduction,proto3" json:"reduction,omitempty"`
-	Probe         uint64                 `protobuf:"varint,2,opt,name=probe,proto3" json:"probe,omitempty"`              // number of the probe that this answers, 0: unasked
+	Probe         uint64                 `protobuf:"varint,2,opt,name=probe,proto3" json:"probe,omitempty"`              // number of the last probe seen, 0: none yet
 	Received      []uint64               `protobuf:"varint,3,rep,packed,name=received,proto3" json:"received,omitempty"` // columns received from other workers (own tiles)
 	Sent          []uint64               `protobuf:"varint,4,rep,packed,name=sent,proto3" json:"sent,omitempty"`         // columns sent to other workers' tiles
 	Empty         []byte                 `protobuf:"bytes,5,opt,name=empty,proto3" json:"empty,omitempty"`               // 1 for every own tile with nothing queued or in work
@@ -856,7 +864,7 @@ type Finished struct {
 	SentColumns     uint64                 `protobuf:"varint,7,opt,name=sent_columns,json=sentColumns,proto3" json:"sent_columns,omitempty"`
 	ReceivedColumns uint64                 `protobuf:"varint,8,opt,name=received_columns,json=receivedColumns,proto3" json:"received_columns,omitempty"`
 	SentBytes       uint64                 `protobuf:"varint,9,opt,name=sent_bytes,json=sentBytes,proto3" json:"sent_bytes,omitempty"`
-	CpuSeconds      float64                `protobuf:"fixed64,10,opt,name=cpu_seconds,json=cpuSeconds,proto3" json:"cpu_seconds,omitempty"`
+	CpuSeconds      float64                `protobuf:"fixed64,10,opt,name=cpu_seconds,json=cpuSeconds,proto3" json:"cpu_seconds,omitempty"` // of the worker since it joined
 	PeakBytes       uint64                 `protobuf:"varint,11,opt,name=peak_bytes,json=peakBytes,proto3" json:"peak_bytes,omitempty"`
 	Tiles           uint32                 `protobuf:"varint,12,opt,name=tiles,proto3" json:"tiles,omitempty"` // owned
 	unknownFields   protoimpl.UnknownFields
@@ -2442,7 +2450,7 @@ const file_pairloom_v1_pairloom_proto_rawDesc = "" +
 	"\x04name\x18\x01 \x01(\tR\x04name\x12\x18\n" +
 	"\aversion\x18\x02 \x01(\tR\aversion\x12\x18\n" +
 	"\aaddress\x18\x03 \x01(\tR\aaddress\x12\x18\n" +
-	"\athreads\x18\x04 \x01(\rR\athreads\"\xde\x02\n" +
+	"\athreads\x18\x04 \x01(\rR\athreads\"\x81\x03\n" +
 	"\bTaskDone\x12\x12\n" +
 	"\x04task\x18\x01 \x01(\x04R\x04task\x12\x1f\n" +
 	"\vcpu_seconds\x18\x02 \x01(\x01R\n" +
@@ -2458,7 +2466,8 @@ const file_pairloom_v1_pairloom_proto_rawDesc = "" +
 	" \x01(\x04R\x04rank\x12!\n" +
 	"\frows_dropped\x18\v \x01(\x04R\vrowsDropped\x12\x1d\n" +
 	"\n" +
-	"peak_bytes\x18\f \x01(\x04R\tpeakBytes\">\n" +
+	"peak_bytes\x18\f \x01(\x04R\tpeakBytes\x12!\n" +
+	"\fpairs_digest\x18\r \x01(\rR\vpairsDigest\">\n" +
 	"\fStageSeconds\x12\x14\n" +
 	"\x05stage\x18\x01 \x01(\tR\x05stage\x12\x18\n" +
 	"\aseconds\x18\x02 \x01(\x01R\aseconds\"u\n" +
