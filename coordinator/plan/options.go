@@ -11,5 +11,6 @@ type Options struct {
 	Memory   uint64   `json:"memory"`             // bytes; 0: no limit
 	Spread   bool     `json:"spread,omitempty"`   // use all workers on every block, however small
 	PerTile  int      `json:"per_tile,omitempty"` // tiles a worker, 0: 8
+	Form     string   `json:"form,omitempty"`     // how changed columns are kept: smaller (also empty), lists, pairs
 	Seed     uint64   `json:"-"`                  // secret seed of the words; 0: drawn
 }

@@ -5,6 +5,7 @@ import (
 	"sort"
 
 	pb "pairloom/proto/pairloomv1"
+	"pairloom/sparse/column"
 	"pairloom/sparse/evidence"
 )
 
@@ -34,7 +35,7 @@ func (m *Machine) open(r *reduction) {
 	r.finished, r.settled = make([]*pb.Finished, t.Workers), make([]uint64, t.Workers)
 	order := &pb.Reduction{Reduction: r.number, Folder: m.job.Folder, Seed: m.job.Seed, Degree: uint32(r.block.Degree),
 		Route: wire(r.block.Route), Masks: r.masks, Rows: t.Rows, TileHeight: t.Height, Tiles: uint32(t.Tiles),
-		Attempt: 1, MapVersion: 1, UseApparent: m.apparent()}
+		Attempt: 1, MapVersion: 1, UseApparent: m.apparent(), Form: form(m.job.Options.Form)}
 	for _, w := range by[:t.Workers] {
 		r.places = append(r.places, w.ID)
 		order.Peers = append(order.Peers, w.Address)
@@ -44,10 +45,14 @@ func (m *Machine) open(r *reduction) {
 	for place, w := range by[:t.Workers] {
 		o := &pb.Reduction{Reduction: order.Reduction, Folder: order.Folder, Seed: order.Seed, Degree: order.Degree, Route: order.Route,
 			Masks: order.Masks, Rows: order.Rows, TileHeight: order.TileHeight, Tiles: order.Tiles, Attempt: order.Attempt,
-			MapVersion: order.MapVersion, UseApparent: order.UseApparent, Peers: order.Peers, Crew: order.Crew,
+			MapVersion: order.MapVersion, UseApparent: order.UseApparent, Form: order.Form, Peers: order.Peers, Crew: order.Crew,
 			Self: uint32(place), Threads: uint32(max(w.Threads, 1))}
 		m.order(w.ID, &pb.Order{Body: &pb.Order_Reduction{Reduction: o}})
 	}
+}
+
+func form(name string) uint32 {
+	return map[string]uint32{"lists": uint32(column.Lists), "pairs": uint32(column.Pairs)}[name]
 }
 
 // place returns where a worker stands in the reduction under way.

@@ -5,6 +5,7 @@ import (
 	"encoding/json"
 	"errors"
 	"fmt"
+	"slices"
 	"time"
 
 	"pairloom/coordinator/plan"
@@ -219,11 +220,10 @@ func (r *run) report() (*report.Run, error) {
 
 func (r *run) members() []*member {
 	var out []*member
-	for id := range r.c.next {
-		if m := r.crew[id]; m != nil {
-			out = append(out, m)
-		}
+	for _, m := range r.crew {
+		out = append(out, m)
 	}
+	slices.SortFunc(out, func(a, b *member) int { return a.id - b.id })
 	return out
 }
 

@@ -1437,6 +1437,7 @@ type Reduction struct {
 	MapVersion    uint32                 `protobuf:"varint,14,opt,name=map_version,json=mapVersion,proto3" json:"map_version,omitempty"`
 	Threads       uint32                 `protobuf:"varint,15,opt,name=threads,proto3" json:"threads,omitempty"`
 	UseApparent   bool                   `protobuf:"varint,16,opt,name=use_apparent,json=useApparent,proto3" json:"use_apparent,omitempty"`
+	Form          uint32                 `protobuf:"varint,17,opt,name=form,proto3" json:"form,omitempty"` // how changed columns are kept: 0 the smaller, 1 lists, 2 bitmap pairs
 	unknownFields protoimpl.UnknownFields
 	sizeCache     protoimpl.SizeCache
 }
@@ -1581,6 +1582,13 @@ func (x *Reduction) GetUseApparent() bool {
 		return x.UseApparent
 	}
 	return false
+}
+
+func (x *Reduction) GetForm() uint32 {
+	if x != nil {
+		return x.Form
+	}
+	return 0
 }
 
 type Begin struct {
@@ -2544,7 +2552,7 @@ const file_pairloom_v1_pairloom_proto_rawDesc = "" +
 	"\x05above\x18\x01 \x01(\bR\x05above\x12\x14\n" +
 	"\x05below\x18\x02 \x01(\bR\x05below\x12!\n" +
 	"\fabove_digest\x18\x03 \x01(\rR\vaboveDigest\x12!\n" +
-	"\fbelow_digest\x18\x04 \x01(\rR\vbelowDigest\"\xc2\x03\n" +
+	"\fbelow_digest\x18\x04 \x01(\rR\vbelowDigest\"\xd6\x03\n" +
 	"\tReduction\x12\x1c\n" +
 	"\treduction\x18\x01 \x01(\x04R\treduction\x12\x16\n" +
 	"\x06folder\x18\x02 \x01(\tR\x06folder\x12\x12\n" +
@@ -2564,7 +2572,8 @@ const file_pairloom_v1_pairloom_proto_rawDesc = "" +
 	"\vmap_version\x18\x0e \x01(\rR\n" +
 	"mapVersion\x12\x18\n" +
 	"\athreads\x18\x0f \x01(\rR\athreads\x12!\n" +
-	"\fuse_apparent\x18\x10 \x01(\bR\vuseApparent\"%\n" +
+	"\fuse_apparent\x18\x10 \x01(\bR\vuseApparent\x12\x12\n" +
+	"\x04form\x18\x11 \x01(\rR\x04form\"%\n" +
 	"\x05Begin\x12\x1c\n" +
 	"\treduction\x18\x01 \x01(\x04R\treduction\"=\n" +
 	"\x05Probe\x12\x1c\n" +

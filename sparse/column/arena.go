@@ -74,9 +74,9 @@ func (a *Arena) at(r Ref) []uint64 {
 // Stored layout: word 0 the checksum, word 1 the length twice, plus 1 for bitmap
 // pairs; then the 64-bit words (pairs only); then the uint32, two a word.
 
-// Put stores a column given as drained words, in its smaller form.
-func (s *Shelf) Put(sum uint64, at []uint32, words []uint64, entries int) (Ref, error) {
-	pairs := PairsPay(len(at), entries)
+// Put stores a column given as drained words, in the form asked for.
+func (s *Shelf) Put(form Form, sum uint64, at []uint32, words []uint64, entries int) (Ref, error) {
+	pairs := form.pairs(len(at), entries)
 	n, need := entries, 2+(entries+1)/2
 	if pairs {
 		n, need = len(at), 2+len(at)+(len(at)+1)/2

@@ -107,3 +107,17 @@ func Word(seed uint64, r uint32) uint64 {
 
 // PairsPay says whether bitmap pairs are the smaller form of a column.
 func PairsPay(words, entries int) bool { return 3*words < entries }
+
+// Form is how changed columns are kept.
+type Form uint8
+
+// The forms: the smaller of the two for each column, or always one (tests).
+const (
+	Smaller Form = iota
+	Lists
+	Pairs
+)
+
+func (f Form) pairs(words, entries int) bool {
+	return f == Pairs || f == Smaller && PairsPay(words, entries)
+}

@@ -14,6 +14,7 @@ type Problem struct {
 	Apparent []uint32    // row → the apparent column that has it as pivot, or block.None; nil: none used
 	Dropped  column.Bits // rows that are read by nobody (row compression); nil: none
 	Seed     uint64      // secret seed of the words of rows
+	Form     column.Form // how changed columns are kept
 	Tiling   Tiling
 	Self     int // which worker of the tiling this is
 }
@@ -271,7 +272,7 @@ func (h *Hand) store(j uint32, sum uint64, raw bool) (column.Ref, error) {
 	if c.Checksum(h.p.Seed) != sum {
 		return 0, failure(j, "its entries do not have its carried checksum")
 	}
-	return h.shelf.Put(sum, h.at, h.words, entries)
+	return h.shelf.Put(h.p.Form, sum, h.at, h.words, entries)
 }
 
 func (h *Hand) leave(j uint32, sum uint64, r uint32) error {

@@ -111,7 +111,7 @@ func (r *reduction) open() (columns uint64, err error) {
 		return 0, err
 	}
 	cleared := known.Births
-	r.problem = reduce.Problem{Columns: r.matrix, Dropped: known.Deaths, Seed: o.Seed, Self: int(o.Self),
+	r.problem = reduce.Problem{Columns: r.matrix, Dropped: known.Deaths, Seed: o.Seed, Self: int(o.Self), Form: column.Form(o.Form),
 		Tiling: reduce.Tiling{Rows: o.Rows, Height: o.TileHeight, Tiles: int(o.Tiles), Workers: len(o.Crew)}}
 	if r.survey != nil {
 		r.problem.Apparent = r.survey.PivotOf
