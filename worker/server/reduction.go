@@ -12,6 +12,7 @@ import (
 	pb "pairloom/proto/pairloomv1"
 	"pairloom/sparse/block"
 	"pairloom/sparse/column"
+	"pairloom/sparse/evidence"
 	"pairloom/sparse/reduce"
 	"pairloom/sparse/stage"
 	"pairloom/worker/exchange"
@@ -426,6 +427,9 @@ func (r *reduction) counters() (report *pb.Counters, closed bool) {
 // finish publishes what the own tiles came to and reports it.
 func (r *reduction) finish() error {
 	defer r.w.cpu.start(false)()
+	if !r.queue.Idle() || r.outstanding() > 0 {
+		return &evidence.Broken{Check: "columns received", Degree: int(r.order.Degree), Why: "columns were at work when every tile was said to be done"}
+	}
 	rows := make([]uint32, 0, r.counts.Settled)
 	cols := make([]uint32, 0, r.counts.Settled)
 	r.table.Pivots(func(row, col uint32) { rows, cols = append(rows, row), append(cols, col) })
