@@ -1793,7 +1793,8 @@ type Batch struct {
 	Attempt       uint32                 `protobuf:"varint,3,opt,name=attempt,proto3" json:"attempt,omitempty"`
 	MapVersion    uint32                 `protobuf:"varint,4,opt,name=map_version,json=mapVersion,proto3" json:"map_version,omitempty"`
 	Sequence      uint64                 `protobuf:"varint,5,opt,name=sequence,proto3" json:"sequence,omitempty"` // 1, 2, 3 … a sender and reduction
-	Columns       []byte                 `protobuf:"bytes,6,opt,name=columns,proto3" json:"columns,omitempty"`
+	Columns       []byte                 `protobuf:"bytes,6,opt,name=columns,proto3" json:"columns,omitempty"`    // at most 1 MiB
+	More          bool                   `protobuf:"varint,7,opt,name=more,proto3" json:"more,omitempty"`         // the batch goes on in the next message, which has the same numbers
 	unknownFields protoimpl.UnknownFields
 	sizeCache     protoimpl.SizeCache
 }
@@ -1868,6 +1869,13 @@ func (x *Batch) GetColumns() []byte {
 		return x.Columns
 	}
 	return nil
+}
+
+func (x *Batch) GetMore() bool {
+	if x != nil {
+		return x.More
+	}
+	return false
 }
 
 type Ack struct {
@@ -2583,7 +2591,7 @@ const file_pairloom_v1_pairloom_proto_rawDesc = "" +
 	"\treduction\x18\x01 \x01(\x04R\treduction\"0\n" +
 	"\x04Stop\x12\x16\n" +
 	"\x06folder\x18\x01 \x01(\tR\x06folder\x12\x10\n" +
-	"\x03why\x18\x02 \x01(\tR\x03why\"\xaa\x01\n" +
+	"\x03why\x18\x02 \x01(\tR\x03why\"\xbe\x01\n" +
 	"\x05Batch\x12\x1c\n" +
 	"\treduction\x18\x01 \x01(\x04R\treduction\x12\x12\n" +
 	"\x04from\x18\x02 \x01(\rR\x04from\x12\x18\n" +
@@ -2591,7 +2599,8 @@ const file_pairloom_v1_pairloom_proto_rawDesc = "" +
 	"\vmap_version\x18\x04 \x01(\rR\n" +
 	"mapVersion\x12\x1a\n" +
 	"\bsequence\x18\x05 \x01(\x04R\bsequence\x12\x18\n" +
-	"\acolumns\x18\x06 \x01(\fR\acolumns\"X\n" +
+	"\acolumns\x18\x06 \x01(\fR\acolumns\x12\x12\n" +
+	"\x04more\x18\a \x01(\bR\x04more\"X\n" +
 	"\x03Ack\x12\x1a\n" +
 	"\bsequence\x18\x01 \x01(\x04R\bsequence\x12\x1b\n" +
 	"\texit_code\x18\x02 \x01(\x05R\bexitCode\x12\x18\n" +

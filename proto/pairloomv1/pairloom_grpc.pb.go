@@ -136,7 +136,7 @@ const (
 //
 // Peers is how workers hand columns to each other, directly.
 type PeersClient interface {
-	// Exchange carries the batches of one sender, one Ack a Batch, in order. A batch
+	// Exchange carries the batches of one sender, one Ack a batch, in order. A batch
 	// may be sent again after a broken stream: the receiver drops what it has.
 	Exchange(ctx context.Context, opts ...grpc.CallOption) (grpc.BidiStreamingClient[Batch, Ack], error)
 }
@@ -168,7 +168,7 @@ type Peers_ExchangeClient = grpc.BidiStreamingClient[Batch, Ack]
 //
 // Peers is how workers hand columns to each other, directly.
 type PeersServer interface {
-	// Exchange carries the batches of one sender, one Ack a Batch, in order. A batch
+	// Exchange carries the batches of one sender, one Ack a batch, in order. A batch
 	// may be sent again after a broken stream: the receiver drops what it has.
 	Exchange(grpc.BidiStreamingServer[Batch, Ack]) error
 	mustEmbedUnimplementedPeersServer()
