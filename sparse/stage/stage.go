@@ -170,6 +170,15 @@ func readSet(to *roaring.Bitmap, f *record.File, kind record.SectionKind, below 
 	return nil
 }
 
+// VerifySurvey re-reads the bytes of a survey of any block.
+func VerifySurvey(path string) error {
+	f, err := record.Open(path, kindSurvey, false)
+	if err != nil {
+		return err
+	}
+	return f.Close()
+}
+
 // Close unmaps the survey.
 func (s *Survey) Close() error { return s.file.Close() }
 

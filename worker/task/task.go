@@ -6,8 +6,11 @@ package task
 
 import (
 	"context"
+	"errors"
 	"fmt"
+	"io/fs"
 	"math/bits"
+	"os"
 
 	"github.com/RoaringBitmap/roaring/v2"
 
@@ -62,14 +65,34 @@ func boundary(ctx context.Context, t *pb.Task, _ *pb.TaskDone) error {
 	return evidence.BoundaryOfBoundary(ctx, int(t.Degree), low, high, t.Seed)
 }
 
-// unchanged re-reads the bytes of a block after the work on it.
+// unchanged re-reads the bytes of a block, and of what was made of it, after the work.
 func unchanged(_ context.Context, t *pb.Task, _ *pb.TaskDone) error {
-	m, err := open(t, t.Degree)
+	for _, turned := range []bool{false, true} {
+		if err := ifThere(stage.MatrixPath(t.Folder, int(t.Degree), turned), verifyBlock); err != nil {
+			return err
+		}
+		if err := ifThere(stage.SurveyPath(t.Folder, int(t.Degree), turned), stage.VerifySurvey); err != nil {
+			return err
+		}
+	}
+	return nil
+}
+
+func verifyBlock(path string) error {
+	m, err := block.Open(path, true)
 	if err != nil {
 		return err
 	}
 	defer m.Close()
 	return m.Verify()
+}
+
+// ifThere calls f for a file that exists.
+func ifThere(path string, f func(string) error) error {
+	if _, err := os.Stat(path); errors.Is(err, fs.ErrNotExist) {
+		return nil
+	}
+	return f(path)
 }
 
 // survey finds apparent pairs; the residue is every other column.

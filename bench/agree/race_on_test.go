@@ -1,0 +1,5 @@
+//go:build race
+
+package agree
+
+const raced = true
