@@ -23,7 +23,7 @@ const module = "pairloom/"
 // floors lists the rooms from the ground up. A room may import rooms of lower
 // floors, and of its own floor only those to its left.
 var floors = [][]string{
-	{"sparse/column", "sparse/record", "sparse/source"},                                                     // words
+	{"sparse/guard", "sparse/column", "sparse/record", "sparse/source"},                                     // words
 	{"sparse/block", "sparse/source/table", "sparse/source/npy", "sparse/source/market"},                    // matrix, formats
 	{"sparse/chain", "sparse/stage", "sparse/order", "sparse/compress", "sparse/evidence", "sparse/reduce"}, // algebra
 	{"sparse/oracle", "sparse/gen", "sparse/exit"},

@@ -7,6 +7,7 @@ import (
 
 	"pairloom/sparse/block"
 	"pairloom/sparse/column"
+	"pairloom/sparse/guard"
 )
 
 // chunk is how many columns a goroutine takes at once: small enough that few
@@ -30,7 +31,7 @@ func Solve(ctx context.Context, p Problem, columns func(yield func(j uint32) boo
 	for range max(threads, 1) {
 		wg.Go(func() {
 			h := t.NewHand()
-			if err := h.drain(ctx, todo, &next); err != nil {
+			if err := guard.Run(func() error { return h.drain(ctx, todo, &next) }); err != nil {
 				cancel(err)
 			}
 			mu.Lock()

@@ -13,6 +13,7 @@ import (
 	"pairloom/sparse/block"
 	"pairloom/sparse/column"
 	"pairloom/sparse/evidence"
+	"pairloom/sparse/guard"
 	"pairloom/sparse/reduce"
 	"pairloom/sparse/stage"
 	"pairloom/worker/exchange"
@@ -195,7 +196,7 @@ func (r *reduction) run() error {
 	var wg sync.WaitGroup
 	start := func(f func() error) {
 		wg.Go(func() {
-			if err := f(); err != nil {
+			if err := guard.Run(f); err != nil {
 				r.fail(err)
 			}
 		})

@@ -17,6 +17,7 @@ import (
 	pb "pairloom/proto/pairloomv1"
 	"pairloom/sparse/column"
 	"pairloom/sparse/exit"
+	"pairloom/sparse/guard"
 	"pairloom/worker/exchange"
 	"pairloom/worker/task"
 )
@@ -146,7 +147,7 @@ func (w *Worker) spawn(ctx context.Context, id uint64, folder string, f func(con
 	w.cancels[id] = folderCancel{folder, cancel}
 	w.mu.Unlock()
 	w.wg.Go(func() {
-		err := f(ctx)
+		err := guard.Run(func() error { return f(ctx) })
 		w.mu.Lock()
 		delete(w.cancels, id)
 		w.mu.Unlock()
