@@ -76,7 +76,7 @@ func (s *State) Elapsed(now time.Time) time.Duration {
 // Event is one line of events.jsonl.
 type Event struct {
 	Time     time.Time `json:"time"`
-	Event    string    `json:"event"` // submitted, started, stage, done, failed
+	Event    string    `json:"event"` // submitted, started, crew, stage, done, failed
 	Stage    string    `json:"stage,omitempty"`
 	Crew     []string  `json:"crew,omitempty"`
 	ExitCode int       `json:"exit_code,omitempty"`
