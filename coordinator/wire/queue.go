@@ -234,7 +234,19 @@ func (q *Queue) work(ctx context.Context, j *job) error {
 	if err := q.cfg.Write(ctx, j.folder, part, run, r.Options.KeepZero || r.Spec.KeepZeroPairs); err != nil {
 		return err
 	}
-	return os.Rename(part, stage.Result(j.folder))
+	if err := os.Rename(part, stage.Result(j.folder)); err != nil {
+		return err
+	}
+	return durable(j.folder)
+}
+
+// durable brings the names in a folder to the disk.
+func durable(folder string) error {
+	f, err := os.Open(folder)
+	if err != nil {
+		return err
+	}
+	return errors.Join(f.Sync(), f.Close())
 }
 
 // progress shows how far a job is; a new stage is an event.

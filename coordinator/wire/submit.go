@@ -182,8 +182,14 @@ func (q *Queue) receive(stream uploads, r journal.Request, files []string) error
 	if err := errors.Join(journal.WriteState(folder, state), journal.Append(folder, journal.Event{Time: r.Submitted, Event: "submitted"})); err != nil {
 		return err
 	}
+	if err := errors.Join(durable(filepath.Join(folder, "input")), durable(folder)); err != nil {
+		return err
+	}
 	if err := q.root.Rename(part, r.Job); err != nil {
 		return exit.With(exit.CannotOut, err)
+	}
+	if err := durable(q.folder); err != nil {
+		q.cfg.Log.Error("the jobs folder cannot be brought to the disk", "error", err)
 	}
 	q.add(r, state)
 	q.cfg.Log.Info("job submitted", "job", r.Job, "kind", r.Spec.Kind, "in_place", r.InPlace)

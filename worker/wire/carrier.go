@@ -24,7 +24,7 @@ import (
 )
 
 const (
-	patience   = 20 * time.Second // of a batch that does not get through
+	patience   = 20 * time.Second // since a batch first failed to get through
 	pauseFirst = 20 * time.Millisecond
 	pauseMost  = time.Second
 	keptBytes  = 4 << 20 // of an encoding buffer between batches
@@ -84,7 +84,7 @@ func (c *Carrier) Carry(ctx context.Context, to exchange.Peer, b exchange.Batch)
 	p.buf = exchange.AppendItems(p.buf[:0], b.Items)
 	defer p.shrink()
 	sent, wait := uint64(0), pauseFirst
-	giveUp := time.Now().Add(c.patience)
+	var failing time.Time // since when
 	for {
 		ack, n, err := c.attempt(ctx, p, b)
 		sent += n
@@ -98,7 +98,10 @@ func (c *Carrier) Carry(ctx context.Context, to exchange.Peer, b exchange.Batch)
 		if ctx.Err() != nil {
 			return sent, context.Cause(ctx)
 		}
-		if time.Now().Add(wait).After(giveUp) || c.ctx.Err() != nil {
+		if failing.IsZero() {
+			failing = time.Now()
+		}
+		if time.Since(failing)+wait > c.patience || c.ctx.Err() != nil {
 			return sent, exit.With(exit.NoPeer, fmt.Errorf("worker at %s cannot be reached: %w", p.address, line.Error(err)))
 		}
 		pause(ctx, wait)
