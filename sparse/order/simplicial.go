@@ -20,6 +20,8 @@ type degreeTable struct {
 	verts  []uint32  // k+1 vertices a simplex, ascending; dense numbers after densify
 	values []float64 // one a simplex; nil where every value is 0 or comes from centres
 	lines  []uint32  // 1-based input line of each simplex, 0 for added ones; nil: not known
+
+	longest []uint32 // flag complexes: rank of the longest edge
 }
 
 func (d *degreeTable) len() int { return len(d.verts) / (d.k + 1) }
@@ -52,6 +54,7 @@ type simplicial struct {
 	tables  []*degreeTable
 	labels  []uint32 // dense number → vertex as given, ascending
 	centre  []uint32 // dense number → rank of the vertex by (value, vertex); lower stars only
+	flag    *flag    // flag complexes only: order by longest edge
 	rankOf  [][]uint32
 	start   [][]uint32 // per degree: first simplex with each first vertex
 	complex *chain.Complex
@@ -270,16 +273,7 @@ func (s *simplicial) build(ctx context.Context, dir string, threads int, p sourc
 // rank orders one degree by value or centre and writes its cell table.
 func (s *simplicial) rank(dir string, d *degreeTable) error {
 	n := d.len()
-	items := make([]Item, n)
-	for i := range items {
-		items[i].Index = uint32(i)
-		if s.centre != nil {
-			items[i].Key = uint64(s.centreOf(d.simplex(i)))
-		} else {
-			items[i].Key = source.SortKey(d.value(i))
-		}
-	}
-	items = Sort(items)
+	items := s.sorted(d)
 	rankOf := make([]uint32, n)
 	for r, it := range items {
 		rankOf[it.Index] = uint32(r)
@@ -301,6 +295,24 @@ func (s *simplicial) rank(dir string, d *degreeTable) error {
 		}
 	}
 	return published(cells.Publish(false), cells.Close)
+}
+
+// sorted returns the simplices of a degree in their order.
+func (s *simplicial) sorted(d *degreeTable) []Item {
+	items := make([]Item, d.len())
+	for i := range items {
+		items[i].Index = uint32(i)
+		switch {
+		case s.centre != nil:
+			items[i].Key = uint64(s.centreOf(d.simplex(i)))
+		case s.flag == nil:
+			items[i].Key = source.SortKey(d.value(i))
+		}
+	}
+	if s.flag != nil {
+		return s.flag.sorted(d, items)
+	}
+	return Sort(items)
 }
 
 func (s *simplicial) createCells(dir string, d *degreeTable) (*chain.Cells, error) {
