@@ -165,6 +165,9 @@ func (c *Centres) Publish(durable bool) error { return c.file.Publish(durable) }
 // Discard drops a table that was not published.
 func (c *Centres) Discard() { c.file.Discard() }
 
+// Close unmaps the table.
+func (c *Centres) Close() error { return c.file.Close() }
+
 // Write publishes complex.json, the last file of a complex's folder.
 func (c *Complex) Write(dir string) error {
 	b, err := json.MarshalIndent(c, "", "  ")

@@ -28,6 +28,7 @@ type Reader struct {
 	buf       []byte
 	from, to  int // unread bytes of buf
 	ended     bool
+	begun     bool // a data line was seen
 	line      int
 	delimiter byte // 0: not known yet; ' ' stands for blanks and tabs
 	fields    [][]byte
@@ -66,11 +67,15 @@ func (r *Reader) Next() bool {
 			continue
 		}
 		if r.delimiter == 0 {
-			first := r.header == nil
+			first := r.header == nil && !r.begun
 			r.delimiter = find(line)
 			if r.split(line) && first && r.isHeader() {
 				r.delimiter = 0 // the first data line decides
 				continue
+			}
+			r.begun = true
+			if len(r.fields) == 1 {
+				r.delimiter = 0 // a line of one field leaves it open
 			}
 			return r.err == nil
 		}
