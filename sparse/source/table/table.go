@@ -3,8 +3,9 @@
 // skipped; one header line is recognised by having no number; CRLF and a byte order
 // mark are accepted; a field may stand in double quotes.
 //
-// Memory: one buffer of 1 MiB, or the longest line. No allocation per line. Not safe
-// for concurrent use.
+// Memory: one buffer of 1 MiB, or the longest line. No allocation per line without
+// quotes. A Reader is not safe for concurrent use; the readers of OpenParts may be
+// used side by side.
 package table
 
 import (
@@ -24,7 +25,9 @@ const (
 type Reader struct {
 	path      string
 	file      *os.File
-	size      uint64
+	in        io.Reader // the file, or a part of it
+	start     int64     // where the part begins
+	size      uint64    // of the file or the part
 	buf       []byte
 	from, to  int // unread bytes of buf
 	ended     bool
@@ -52,7 +55,7 @@ func Open(path string) (*Reader, error) {
 		f.Close()
 		return nil, err
 	}
-	return &Reader{path: path, file: f, size: uint64(info.Size()), buf: make([]byte, bufferBytes)}, nil
+	return &Reader{path: path, file: f, in: f, size: uint64(info.Size()), buf: make([]byte, bufferBytes)}, nil
 }
 
 // Next reads the next data line; false at the end or on an error (see Err).
@@ -142,11 +145,11 @@ func (r *Reader) nextLine() ([]byte, bool) {
 }
 
 func (r *Reader) checked(line []byte) ([]byte, bool) {
-	if r.line == 1 {
+	if r.start == 0 && r.line == 1 {
 		line = bytes.TrimPrefix(line, []byte("\xef\xbb\xbf"))
 	}
 	if bytes.IndexByte(line, 0) >= 0 {
-		r.err = source.Broken(r.path, r.line, "a zero byte; this is no text file")
+		r.err = source.Broken(r.path, r.Line(), "a zero byte; this is no text file")
 		return nil, false
 	}
 	return line, true
@@ -159,12 +162,12 @@ func (r *Reader) fill() int {
 	r.from, r.to = 0, n
 	if n == len(r.buf) {
 		if n >= lineMost {
-			r.err = source.Broken(r.path, r.line+1, "longer than %d MiB; this is no table", lineMost>>20)
+			r.err = source.Broken(r.path, r.Line()+1, "longer than %d MiB; this is no table", lineMost>>20)
 			return n
 		}
 		r.buf = append(r.buf, make([]byte, len(r.buf))...)
 	}
-	got, err := r.file.Read(r.buf[n:])
+	got, err := r.in.Read(r.buf[n:])
 	r.to += got
 	r.read += uint64(got)
 	switch {
@@ -242,7 +245,7 @@ func (r *Reader) splitQuoted(line []byte) bool {
 		}
 	}
 	if quoted {
-		r.err = source.Broken(r.path, r.line, "a quote that is not closed")
+		r.err = source.Broken(r.path, r.Line(), "a quote that is not closed")
 		return false
 	}
 	push()
@@ -252,8 +255,14 @@ func (r *Reader) splitQuoted(line []byte) bool {
 // Fields returns the fields of the line; valid until the next call of Next.
 func (r *Reader) Fields() [][]byte { return r.fields }
 
-// Line returns the 1-based number of the line.
-func (r *Reader) Line() int { return r.line }
+// Line returns the 1-based number of the line in the file. In a part of a file the
+// lines before it are counted anew at every call: meant for error messages.
+func (r *Reader) Line() int {
+	if r.start == 0 {
+		return r.line
+	}
+	return r.line + newlines(io.NewSectionReader(r.file, 0, r.start))
+}
 
 // Err returns what ended the reading, nil at the end of the file.
 func (r *Reader) Err() error { return r.err }
@@ -264,7 +273,7 @@ func (r *Reader) Header() []string { return r.header }
 // BytesRead returns how many bytes were read so far, of Size.
 func (r *Reader) BytesRead() uint64 { return r.read }
 
-// Size returns the size of the file in bytes.
+// Size returns the size of the file, or of the part, in bytes.
 func (r *Reader) Size() uint64 { return r.size }
 
 // Path returns the file's path.

@@ -1,6 +1,7 @@
 package table
 
 import (
+	"bytes"
 	"fmt"
 	"math"
 	"math/rand/v2"
@@ -84,6 +85,58 @@ func TestLinesAcrossBuffers(t *testing.T) {
 	require.NoError(t, err)
 	require.Len(t, rows, 200_000)
 	require.Equal(t, "199999:199998|1399986", rows[199_998])
+}
+
+// Parts give the lines of the whole, with their numbers; damage is named alike.
+func TestParts(t *testing.T) {
+	r := rand.New(rand.NewPCG(7, 7))
+	for round := range 12 {
+		var b strings.Builder
+		b.WriteString([]string{"", "\xef\xbb\xbf", "# note\n", "name\n7\n"}[round%4])
+		for i := range 40_000 {
+			switch r.IntN(9) {
+			case 0:
+				fmt.Fprintf(&b, "# line %d\r\n\n", i)
+			case 1:
+				fmt.Fprintln(&b, i)
+			default:
+				fmt.Fprintf(&b, "%d;%d ;%d\n", i, r.IntN(1000), r.Uint32())
+			}
+		}
+		text := strings.TrimSuffix(b.String(), []string{"", "\n"}[round%2])
+		if round > 7 {
+			text = text[:len(text)-90000] + "\n1;\"x\n" + text[len(text)-90000:]
+		}
+		path := write(t, text)
+		want, header, wantErr := readAll(t, path)
+		parts, err := OpenParts(path, 1+round)
+		require.NoError(t, err)
+		require.Len(t, parts, min(1+round, len(text)/partLeast))
+		var got []string
+		read, size := uint64(0), uint64(0)
+		for _, p := range parts {
+			for err == nil && p.Next() {
+				got = append(got, string(bytes.Join(p.Fields(), []byte("|"))))
+			}
+			read, size = read+p.BytesRead(), size+p.Size()
+			if err == nil {
+				err = p.Err()
+			}
+			if err == nil && p.Header() != nil {
+				require.Equal(t, header, p.Header())
+			}
+			require.NoError(t, p.Close())
+		}
+		require.Equal(t, wantErr, err)
+		require.EqualValues(t, len(text), size)
+		if err == nil {
+			require.Equal(t, size, read)
+		}
+		for i := range want {
+			want[i] = want[i][strings.IndexByte(want[i], ':')+1:]
+		}
+		require.Equal(t, want, got)
+	}
 }
 
 // ParseFloat gives what the standard library gives, to the bit.
