@@ -2,10 +2,9 @@ package order
 
 import (
 	"context"
-	"fmt"
 	"io"
 	"math"
-	"math/big"
+	"slices"
 	"strings"
 
 	"pairloom/sparse/chain"
@@ -22,130 +21,94 @@ import (
 // Time and memory: as Simplices, for the faces with repetitions.
 func Facets(ctx context.Context, spec source.Spec, dir string, threads int, p source.Progress) (*chain.Complex, error) {
 	p.Stage("read")
-	r := &simplexReader{spec: spec}
-	if err := r.read(ctx, p); err != nil {
+	r := &simplexReader{spec: spec, widest: verticesMost}
+	if err := r.run(ctx, threads, p); err != nil {
 		return nil, err
 	}
-	s := &simplicial{path: spec.Inputs[0], tables: r.tables, complex: &chain.Complex{Kind: string(source.Facets), Naming: chain.BySimplex, KeepZero: spec.KeepZeroPairs}}
-	for _, d := range s.tables {
-		d.lines = nil
+	s := newSimplicial(spec, source.Facets, r)
+	defer s.free()
+	if err := s.closeFacets(ctx, spec); err != nil {
+		return nil, err
 	}
-	top := len(s.tables) - 1
-	if spec.Degrees >= 0 {
-		top = min(top, spec.Degrees+1)
+	if err := s.build(ctx, dir, threads, p); err != nil {
+		return nil, err
 	}
+	return s.complex, nil
+}
+
+// closeFacets numbers the vertices and makes all faces.
+func (s *simplicial) closeFacets(ctx context.Context, spec source.Spec) error {
+	top := s.top()
 	if err := closureFits(spec, s.tables, top); err != nil {
-		return nil, err
+		return err
 	}
 	s.labels = labelsOf(s.tables)
-	densify(s.tables, s.labels)
-	if err := s.closeFacets(ctx, top); err != nil {
-		return nil, err
-	}
-	s.complex.Degrees = len(s.tables) - 1
-	s.cutAbove(spec)
-	if err := budget(spec, s.tables); err != nil {
-		return nil, err
-	}
+	var rank []uint32
 	if spec.Function != "" {
-		if err := s.lowerStar(spec.Function); err != nil {
-			return nil, err
+		var err error
+		if rank, err = s.lowerStar(spec.Function); err != nil {
+			return err
 		}
 	}
-	return s.complex, s.build(ctx, dir, threads, p)
+	densify(s.tables, s.labels)
+	if rank != nil {
+		s.rankVertices(rank)
+	}
+	merged := uint64(0)
+	done, err := s.close(ctx, spec, func(_ *degreeTable, _ uint32, given, added int) error {
+		if added == 0 {
+			given--
+		}
+		merged += uint64(given)
+		return nil
+	})
+	s.note(merged, "lines that repeat a simplex or a face of one, merged")
+	s.note(done.left, "simplices above degree %d left out, their faces kept", top)
+	return err
 }
 
-// closureFits bounds the faces, with repetitions, before any is made.
-func closureFits(spec source.Spec, tables []*degreeTable, top int) error {
-	faces, need := new(big.Int), new(big.Int)
-	for _, d := range tables {
-		for k := 0; k <= min(d.k, top); k++ {
-			n := new(big.Int).Binomial(int64(d.k+1), int64(k+1))
-			n.Mul(n, big.NewInt(int64(d.len())))
-			faces.Add(faces, n)
-			need.Add(need, n.Mul(n, big.NewInt(int64(4*(k+1)))))
-		}
-	}
-	limit := new(big.Int).SetUint64(math.MaxUint32)
-	if spec.MemoryBytes > 0 && need.Cmp(new(big.Int).SetUint64(spec.MemoryBytes)) > 0 || spec.MemoryBytes == 0 && faces.Cmp(limit) >= 0 {
-		return &source.TooBig{Why: fmt.Sprintf("%s: its facets have %d faces up to degree %d, counted with repetition, about %d MiB; --memory allows %d MiB; lower --degrees or raise --memory",
-			spec.Inputs[0], faces, top, new(big.Int).Rsh(need, 20), spec.MemoryBytes>>20)}
-	}
-	return nil
-}
-
-// closeFacets makes all faces up to degree top, each once, every degree sorted.
-func (s *simplicial) closeFacets(ctx context.Context, top int) error {
-	for len(s.tables)-1 > top {
-		last := s.tables[len(s.tables)-1]
-		s.tables = s.tables[:len(s.tables)-1]
-		last.facesOf(s.tables[top])
-		s.complex.Truncated = true
-	}
-	for k := len(s.tables) - 1; k >= 0; k-- {
-		if ctx.Err() != nil {
-			return context.Cause(ctx)
-		}
-		d := s.tables[k]
-		sortTable(d, len(s.labels))
-		d.merge()
-		if k > 0 {
-			d.facetsOf(s.tables[k-1])
-		}
-	}
-	return nil
-}
-
-// facesOf appends all faces of degree to.k of d's simplices.
-func (d *degreeTable) facesOf(to *degreeTable) {
-	n, m := d.k+1, to.k+1
-	pick := make([]int, m)
-	for i := range d.len() {
-		s := d.simplex(i)
-		for q := range pick {
-			pick[q] = q
-		}
-		for {
-			for _, q := range pick {
-				to.verts = append(to.verts, s[q])
-			}
-			q := m - 1
-			for q >= 0 && pick[q] == n-m+q {
-				q--
-			}
-			if q < 0 {
-				break
-			}
-			pick[q]++
-			for q++; q < m; q++ {
-				pick[q] = pick[q-1] + 1
-			}
-		}
-	}
-}
-
-// lowerStar reads the function and orders the vertices by it.
-func (s *simplicial) lowerStar(path string) error {
+// lowerStar reads the function and returns the rank of each vertex by (value, number).
+func (s *simplicial) lowerStar(path string) ([]uint32, error) {
 	values, err := readFunction(path)
 	if err != nil {
-		return err
+		return nil, err
 	}
 	last := s.labels[len(s.labels)-1]
 	if uint64(len(values)) != uint64(last)+1 {
-		return source.Broken(path, 0, "%d values; one for each vertex 0..%d of %s was expected", len(values), last, s.path)
+		return nil, source.Broken(path, 0, "%d values; one for each vertex 0..%d of %s was expected", len(values), last, s.path)
 	}
 	items := make([]Item, len(s.labels))
-	s.tables[0].values = make([]float64, len(s.labels))
 	for v, label := range s.labels {
-		s.tables[0].values[v] = values[label]
 		items[v] = Item{source.SortKey(values[label]), uint32(v)}
 	}
-	s.centre = make([]uint32, len(items))
-	for r, it := range Sort(items) {
-		s.centre[it.Index] = uint32(r)
-	}
 	s.complex.Naming = chain.ByVertex
-	return nil
+	s.centres = make([]float64, len(items))
+	rank := make([]uint32, len(items))
+	for r, it := range Sort(items) {
+		s.centres[r] = values[s.labels[it.Index]]
+		rank[it.Index] = uint32(r)
+	}
+	return rank, nil
+}
+
+// rankVertices makes ranks of the dense numbers; each simplex then has its latest
+// vertex first, so that the lexicographic order is the order of the lower star.
+func (s *simplicial) rankVertices(rank []uint32) {
+	for _, d := range s.tables {
+		for i := range d.len() {
+			simplex := d.simplex(i)
+			for q, v := range simplex {
+				simplex[q] = rank[v]
+			}
+			sortSmall(simplex)
+			slices.Reverse(simplex)
+		}
+	}
+	labels := make([]uint32, len(rank))
+	for v, r := range rank {
+		labels[r] = s.labels[v]
+	}
+	s.labels = labels
 }
 
 // readFunction reads one finite value a vertex, from .npy (one axis) or text (one a line).
