@@ -2,8 +2,10 @@ package order
 
 import (
 	"context"
+	"encoding/binary"
 	"encoding/csv"
 	"fmt"
+	"math"
 	"math/rand/v2"
 	"os"
 	"path/filepath"
@@ -113,6 +115,30 @@ func TestFacetsFunction(t *testing.T) {
 	}
 }
 
+// The function may be an array: the same folder as from text.
+func TestFacetsFunctionArray(t *testing.T) {
+	values := []float64{2, -1, 0.5, -1}
+	array := []byte("\x93NUMPY\x01\x00\x76\x00" + fmt.Sprintf("%-117s\n", "{'descr': '<f8', 'fortran_order': False, 'shape': (4,), }"))
+	text := ""
+	for _, v := range values {
+		array = binary.LittleEndian.AppendUint64(array, math.Float64bits(v))
+		text += fmt.Sprintln(v)
+	}
+	spec := faceted(place(t, "in.csv", "0,1,2\n2,3\n"), -1)
+	var folders []map[string]string
+	for _, spec.Function = range []string{place(t, "f.npy", string(array)), place(t, "f.csv", text)} {
+		dir := t.TempDir()
+		_, err := Facets(context.Background(), spec, dir, 1, source.Quiet{})
+		require.NoError(t, err)
+		folders = append(folders, files(t, dir))
+	}
+	require.Equal(t, folders[0], folders[1])
+	copy(array[len(array)-8:], "\x00\x00\x00\x00\x00\x00\xf8\x7f") // NaN
+	spec.Function = place(t, "f.npy", string(array))
+	_, err := Facets(context.Background(), spec, t.TempDir(), 1, source.Quiet{})
+	require.ErrorContains(t, err, "value 3 is NaN")
+}
+
 // smallNumbers gives the vertices small numbers, some of them unused.
 func smallNumbers(t twin) twin {
 	out := twin{}
@@ -187,14 +213,14 @@ func TestFacetsBroken(t *testing.T) {
 		{"0,1\n1,1,2\n", "", "line 2: vertex 1 is repeated"},
 		{"0,1\n0.5,1\n", "", `line 2: vertex "0.5"`},
 		{"0 1\n0 1 2,3\n", "", `line 2: vertex "2,3"`},
-		{"0" + vertices(26)[2:] + "\n", "", "line 1: 26 vertices; all faces are made of simplices of up to 25"},
+		{vertices(26)[1:] + "\n", "", "line 1: 26 vertices; all faces are made of simplices of up to 25"},
 		{"0,1\n1,2\n", "1\n2\n", "2 values; one for each vertex 0..2"},
 		{"0,1\n1,2\n", "1\n2\n3\n4\n", "4 values; one for each vertex 0..2"},
 		{"0,1\n1,2\n", "1\nNaN\n3\n", "line 2: one finite value was expected, for vertex 1"},
 		{"0,1\n1,2\n", "1\n2\n+Inf\n", "line 3: one finite value"},
 		{"0,1\n1,2\n", "1\n2,3\n4\n", "line 2: one finite value"},
 	} {
-		spec := faceted(place(t, "in.csv", strings.Replace(c.text, "0,1,2,3,4,5,6,7,8,9,10,11", "99,1,2,3,4,5,6,7,8,9,10,11", 1)), -1)
+		spec := faceted(place(t, "in.csv", c.text), -1)
 		if c.function != "" {
 			spec.Function = place(t, "f.csv", c.function)
 		}

@@ -67,7 +67,7 @@ func (s *simplicial) note(count uint64, format string, args ...any) {
 
 // prepare numbers the vertices, sorts every degree and closes or refuses what is open.
 func (s *simplicial) prepare(ctx context.Context, spec source.Spec, r *simplexReader, threads int) error {
-	top, left := s.top(), r.left
+	top := s.top()
 	if spec.Close {
 		if err := closureFits(spec, s.tables, top); err != nil {
 			return err
@@ -88,8 +88,11 @@ func (s *simplicial) prepare(ctx context.Context, spec source.Spec, r *simplexRe
 		s.note(done.left, "simplices above degree %d left out", top)
 		return err
 	}
-	s.note(left, "simplices above degree %d left out", top)
+	s.note(r.left, "simplices above degree %d left out", top)
 	return parallel(len(s.tables), threads, func(k int) error {
+		if ctx.Err() != nil {
+			return context.Cause(ctx)
+		}
 		d := s.tables[k]
 		return sortTable(d, len(s.labels), d.len(), func(first uint32, _, _ int) error { return s.duplicate(d.simplex(int(first))) })
 	})

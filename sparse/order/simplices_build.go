@@ -4,6 +4,7 @@ import (
 	"context"
 	"fmt"
 	"os"
+	"path/filepath"
 	"slices"
 	"sync"
 
@@ -105,7 +106,11 @@ func (s *simplicial) publish(ctx context.Context, dir string, threads int, p sou
 	if err != nil {
 		return err
 	}
-	return c.Write(dir)
+	if err := c.Write(dir); err != nil {
+		s.made = append(s.made, filepath.Join(dir, "complex.json"))
+		return err
+	}
+	return nil
 }
 
 // each runs f for the degrees from first on, and reports progress.
