@@ -27,10 +27,13 @@ import (
 // options draws one way of doing the work.
 func options(r *rand.Rand) (plan.Options, int, int) {
 	o := plan.Options{Spread: r.IntN(8) > 0, PerTile: 1 + r.IntN(8), Recheck: r.IntN(2) == 0,
-		Route: []string{"auto", "boundary", "coboundary"}[r.IntN(3)], Form: []string{"", "lists", "pairs"}[r.IntN(3)]}
-	for _, step := range []string{"apparent", "graph", "clearing", "compression"} {
-		if r.IntN(3) == 0 {
-			o.Without = append(o.Without, step)
+		Route: []string{"auto", "boundary", "coboundary", "boundary"}[r.IntN(4)], Form: []string{"", "lists", "pairs"}[r.IntN(3)]}
+	for _, step := range []struct {
+		name string
+		odds int
+	}{{"apparent", 3}, {"graph", 4}, {"clearing", 5}, {"compression", 8}} {
+		if r.IntN(step.odds) == 0 {
+			o.Without = append(o.Without, step.name)
 		}
 	}
 	return o, 1 + r.IntN(4), 1 + r.IntN(4)
