@@ -27,7 +27,7 @@ var floors = [][]string{
 	{"sparse/block", "sparse/source/table", "sparse/source/npy", "sparse/source/market"},                    // matrix, formats
 	{"sparse/chain", "sparse/stage", "sparse/order", "sparse/compress", "sparse/evidence", "sparse/reduce"}, // algebra
 	{"sparse/oracle", "sparse/gen", "sparse/exit"},
-	{"proto/pairloomv1"},
+	{"proto/pairloomv1", "proto/line"},
 	{"coordinator/plan", "coordinator/schedule", "coordinator/report", "coordinator/journal", "coordinator/server", "coordinator/wire",
 		"worker/tile", "worker/exchange", "worker/task", "worker/server", "worker/wire"},
 	{"coordinator/cmd/inprocess", "coordinator/cmd/pairloom"},
@@ -51,9 +51,8 @@ func place(room string) (floor, at int, ok bool) {
 var onlyHere = map[string][]string{
 	"google.golang.org/grpc":     {"proto/", "coordinator/wire", "worker/wire", "coordinator/cmd/pairloom", "bench"},
 	"google.golang.org/protobuf": {"proto/", "coordinator/", "worker/", "bench"},
-	"net":                        {"coordinator/wire", "worker/wire", "coordinator/cmd/pairloom", "bench"},
+	"net":                        {"proto/line", "coordinator/wire", "worker/wire", "coordinator/cmd/pairloom", "bench"},
 	"github.com/spf13/cobra":     {"coordinator/cmd/pairloom"},
-	"github.com/vbauerster/mpb":  {"coordinator/cmd/pairloom"},
 }
 
 // pure rooms may use no clock, file system, network or source of randomness of the machine.
