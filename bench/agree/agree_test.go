@@ -31,7 +31,7 @@ func options(r *rand.Rand) (plan.Options, int, int) {
 	for _, step := range []struct {
 		name string
 		odds int
-	}{{"apparent", 3}, {"graph", 4}, {"clearing", 5}, {"compression", 8}} {
+	}{{"apparent", 3}, {"graph", 7}, {"clearing", 5}, {"compression", 20}} {
 		if r.IntN(step.odds) == 0 {
 			o.Without = append(o.Without, step.name)
 		}

@@ -25,11 +25,14 @@ type pair struct {
 }
 
 // Write reads the pairs of all blocks of a finished job and writes pairs.csv, betti.csv
-// and summary.json into dst, which exists. Zero-length pairs are written with keepZero,
+// and summary.json into dst, which is made if it is missing. Zero-length pairs are written with keepZero,
 // or where the complex asks for them. Errors: *evidence.Broken if a cell is both a birth
 // and a death, and input or output errors; a file appears whole or not at all.
 // Memory: 8 bytes a printed pair of one degree and the masks.
 func Write(ctx context.Context, job, dst string, run *Run, keepZero bool) (*Summary, error) {
+	if err := os.MkdirAll(dst, 0o755); err != nil {
+		return nil, err
+	}
 	t, err := chain.OpenTable(stage.Order(job))
 	if err != nil {
 		return nil, err
