@@ -176,8 +176,8 @@ func raw(t *testing.T, name string, width int) (out []float64) {
 	return out
 }
 
-// block cuts [from, to) out of an array.
-func block(shape, from, to []int, values []float64) (size []int, out []float64) {
+// cutOut cuts [from, to) out of an array.
+func cutOut(shape, from, to []int, values []float64) (size []int, out []float64) {
 	for d := range shape {
 		size = append(size, to[d]-from[d])
 	}
@@ -226,11 +226,11 @@ func TestGridDiagrams(t *testing.T) {
 	for _, i := range []int{0, 1, 9} {
 		check(t, fmt.Sprintf("cubical_fashion_%d", i), grid(array(t, []int{28, 28}, raw(t, "fashion_200.npy", 1)[i*784:(i+1)*784]), "vertices"))
 	}
-	size, dem := block([]int{344, 403}, []int{0, 0}, []int{72, 72}, raw(t, "jacksboro_dem.npy", 2))
+	size, dem := cutOut([]int{344, 403}, []int{0, 0}, []int{72, 72}, raw(t, "jacksboro_dem.npy", 2))
 	check(t, "cubical_dem_block", grid(array(t, size, dem), "vertices"))
-	size, mri := block([]int{256, 256}, []int{96, 96}, []int{160, 160}, raw(t, "mri_slice_256.npy", 2))
+	size, mri := cutOut([]int{256, 256}, []int{96, 96}, []int{160, 160}, raw(t, "mri_slice_256.npy", 2))
 	check(t, "cubical_mri_block", grid(array(t, size, mri), "cells"))
-	size, brain := block([]int{22, 27, 22}, []int{3, 4, 3}, []int{19, 22, 19}, raw(t, "mr_brain_sums_22.npy", 4))
+	size, brain := cutOut([]int{22, 27, 22}, []int{3, 4, 3}, []int{19, 22, 19}, raw(t, "mr_brain_sums_22.npy", 4))
 	for i := range brain {
 		brain[i] = -brain[i]
 	}
