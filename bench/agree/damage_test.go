@@ -205,7 +205,9 @@ func TestDamageIsNeverPublished(t *testing.T) {
 	}
 	t.Logf("%d damaged runs, %d refused, by mode %v", did, refused, byMode)
 	require.Greater(t, refused*2, did, "most damage matters")
-	require.Len(t, byMode, modes, "every mode must have happened")
+	if !raced { // with the race detector there are too few runs for every mode
+		require.Len(t, byMode, modes, "every mode must have happened")
+	}
 }
 
 func hurt(d *damage, spec source.Spec, o plan.Options, workers, threads int) error {
