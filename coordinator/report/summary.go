@@ -1,9 +1,10 @@
 package report
 
 import (
+	"encoding/json"
 	"fmt"
 	"io"
-	"strings"
+	"time"
 
 	"pairloom/sparse/chain"
 	"pairloom/sparse/stage"
@@ -20,7 +21,7 @@ type Summary struct {
 	Truncated  bool              `json:"truncated"`
 	PerDegree  []DegreeSummary   `json:"per_degree"`
 	Betti      []*uint64         `json:"betti"`
-	Euler      *int64            `json:"euler"` // alternating sum of the cells; null where the complex is cut
+	Euler      *int64            `json:"euler"` // alternating sum of the cells; null where some degrees are not there
 	Graph      *GraphSummary     `json:"graph"`
 	Exchange   ExchangeSummary   `json:"exchange"`
 	Crew       []MemberSummary   `json:"crew"`
@@ -28,8 +29,9 @@ type Summary struct {
 	Seconds    SecondsSummary    `json:"seconds"`
 	CPU        *float64          `json:"cpu_seconds"`
 	Peak       *uint64           `json:"peak_bytes"`
-	Checks     []Check           `json:"checks"`
-	Notes      []chain.Note      `json:"notes"`
+	Checks     []Check           `json:"checks"` // the evidence, then what the reader counted
+	notes      []chain.Note
+	evidence   []Check
 	longest    []Long
 }
 
@@ -114,23 +116,16 @@ func seconds(m map[string]float64) SecondsSummary {
 	return SecondsSummary{at("read"), at("order"), at("block"), at("compress"), at("reduce"), at("merge"), at("evidence"), at("write"), at("total")}
 }
 
-func summarise(run *Run, betti []*uint64) *Summary {
-	c := run.Complex
-	s := &Summary{Schema: 1, Version: run.Version, Inputs: run.Inputs, Kind: c.Kind, Options: run.Options, Degrees: c.Degrees, Truncated: c.Truncated,
-		Betti: betti, Exchange: ExchangeSummary{Columns: run.Exchanged, Bytes: run.ExchangeBytes}, Crew: []MemberSummary{},
-		Seconds: seconds(run.Seconds), CPU: &run.CPU, Peak: &run.Peak, Checks: run.Checks, Notes: append([]chain.Note{}, c.Notes...)}
+func summarise(run *Run, c *chain.Complex, d *diagram, took time.Duration) *Summary {
+	s := &Summary{Schema: 1, Version: run.Version, Inputs: append([]stage.InputFile{}, run.Inputs...), Kind: c.Kind, Options: run.Options,
+		Degrees: c.Degrees, Truncated: c.Truncated, Betti: d.betti, Euler: euler(c), Crew: []MemberSummary{},
+		Exchange: ExchangeSummary{Columns: run.Exchanged, Bytes: run.ExchangeBytes}, Seconds: run.took(took),
+		CPU: known(run.CPU), Peak: known(run.Peak), Checks: append([]Check{}, run.Checks...), notes: c.Notes, evidence: run.Checks, longest: d.longest}
 	if g := c.Graph; g != nil {
 		s.Graph = &GraphSummary{g.Vertices, g.Edges, g.Rank, g.Components, g.Loops}
 	}
-	if !c.Truncated {
-		euler := int64(0)
-		for k, n := range c.Cells {
-			euler += int64(n) * int64(1-2*(k%2))
-		}
-		s.Euler = &euler
-	}
 	for k, n := range c.Cells {
-		s.PerDegree = append(s.PerDegree, degreeSummary(run, k, n, betti))
+		s.PerDegree = append(s.PerDegree, degreeSummary(run, k, n, d.betti))
 	}
 	for _, b := range run.Blocks {
 		s.Exchange.MatrixBytes += 4 * b.Nonzeros
@@ -138,7 +133,47 @@ func summarise(run *Run, betti []*uint64) *Summary {
 	for _, m := range run.Crew {
 		s.Crew = append(s.Crew, MemberSummary(m))
 	}
+	for _, n := range c.Notes {
+		s.Checks = append(s.Checks, Check{Name: "input: " + n.What, Verdict: fmt.Sprintf("counted: %d", n.Count)})
+	}
 	return s
+}
+
+// took enters the seconds of writing.
+func (run *Run) took(write time.Duration) SecondsSummary {
+	if run.Seconds == nil {
+		run.Seconds = map[string]float64{}
+	}
+	if _, ok := run.Seconds["total"]; !ok {
+		sum := 0.0
+		for _, s := range run.Seconds {
+			sum += s
+		}
+		run.Seconds["total"] = sum
+	}
+	run.Seconds["write"] = write.Seconds()
+	run.Seconds["total"] += write.Seconds()
+	return seconds(run.Seconds)
+}
+
+// euler is the alternating sum of the cells, nil where some are not there.
+func euler(c *chain.Complex) *int64 {
+	if c.Truncated || c.First > 0 {
+		return nil
+	}
+	sum := int64(0)
+	for k, n := range c.Cells {
+		sum += int64(n) * int64(1-2*(k%2))
+	}
+	return &sum
+}
+
+// known is v, or nil for a figure that nobody took.
+func known[T uint64 | float64](v T) *T {
+	if v == 0 {
+		return nil
+	}
+	return &v
 }
 
 func degreeSummary(run *Run, k int, cells uint32, betti []*uint64) DegreeSummary {
@@ -156,54 +191,10 @@ func degreeSummary(run *Run, k int, cells uint32, betti []*uint64) DegreeSummary
 	return d
 }
 
-// holes names the classes of a degree for people: one, many.
-func holes(k int) (one, many string) {
-	switch k {
-	case 0:
-		return "connected component", "connected components"
-	case 1:
-		return "independent loop", "independent loops"
-	case 2:
-		return "enclosed void", "enclosed voids"
-	}
-	return fmt.Sprintf("class of degree %d", k), fmt.Sprintf("classes of degree %d", k)
-}
-
-// Words says what came out, for a person.
-func (s *Summary) Words(w io.Writer) {
-	cells := uint64(0)
-	for _, d := range s.PerDegree {
-		cells += uint64(d.Cells)
-	}
-	fmt.Fprintf(w, "%d cells of a %s complex.\n", cells, s.Kind)
-	for k, b := range s.Betti {
-		if b == nil {
-			continue
-		}
-		one, many := holes(k)
-		name := many
-		if *b == 1 {
-			name = one
-		}
-		fmt.Fprintf(w, "  degree %d: %d %s at the end (Betti number %d)\n", k, *b, name, *b)
-		for _, l := range s.longest {
-			if l.Degree == k {
-				fmt.Fprintf(w, "            one lasts from %v to %v (%v long), born at cell %s\n", l.Birth, l.Death, l.Death-l.Birth, l.Where)
-			}
-		}
-	}
-	if s.Truncated {
-		fmt.Fprintf(w, "  cut above degree %d: nothing is claimed for higher degrees\n", s.Degrees)
-	}
-	if g := s.Graph; g != nil {
-		fmt.Fprintf(w, "  as a directed multigraph: %d vertices, %d edges, rank %d, %d components, %d independent loops\n", g.Vertices, g.Edges, g.Rank, g.Components, g.Loops)
-	}
-	for _, n := range s.Notes {
-		fmt.Fprintf(w, "  note: %s: %d\n", n.What, n.Count)
-	}
-	var checks []string
-	for _, c := range s.Checks {
-		checks = append(checks, c.Name+" ("+c.Verdict+")")
-	}
-	fmt.Fprintf(w, "  evidence: %s\n", strings.Join(checks, "; "))
+// WriteJSON writes the summary as summary.json has it: keys in their order, indented.
+func (s *Summary) WriteJSON(out io.Writer) error {
+	e := json.NewEncoder(out)
+	e.SetEscapeHTML(false)
+	e.SetIndent("", "  ")
+	return e.Encode(s)
 }
