@@ -3,15 +3,14 @@ package main
 import (
 	"errors"
 	"fmt"
+	"maps"
 	"math"
 	"os"
-	"path/filepath"
 	"slices"
 	"strconv"
 	"strings"
 
 	"github.com/spf13/cobra"
-	"golang.org/x/sys/unix"
 
 	"pairloom/coordinator/plan"
 	"pairloom/sparse/exit"
@@ -78,13 +77,8 @@ func (f *inputFlags) read(args []string) (source.Spec, plan.Options, error) {
 		return fail(err)
 	}
 	spec.Inputs = args
-	if err := inputsThere(args); err != nil {
+	if err := f.kindsFit(spec.Kind); err != nil {
 		return fail(err)
-	}
-	for name, kinds := range kindFlags {
-		if f.c.Flags().Changed(name) && !slices.Contains(kinds, spec.Kind) {
-			return fail(usage("--%s means nothing for an input read as %s", name, spec.Kind))
-		}
 	}
 	if f.c.Flags().Changed("max-scale") {
 		if !(f.maxScale >= 0) || math.IsInf(f.maxScale, 0) {
@@ -99,7 +93,35 @@ func (f *inputFlags) read(args []string) (source.Spec, plan.Options, error) {
 		return fail(err)
 	}
 	spec.KeepZeroPairs = options.KeepZero
-	return spec, options, nil
+	return spec, options, inputsThere(slices.Concat(args, spec.ValueFiles, named(spec.Function)))
+}
+
+// kindsFit refuses flags that mean nothing for an input of that kind.
+func (f *inputFlags) kindsFit(kind source.Kind) error {
+	for _, name := range slices.Sorted(maps.Keys(kindFlags)) {
+		if f.c.Flags().Changed(name) && !slices.Contains(kindFlags[name], kind) {
+			return usage("--%s means nothing for an input read as %s; it is for %s", name, kind, list(kindFlags[name]))
+		}
+	}
+	if f.spec.FacesInCols && f.spec.FacesInRows {
+		return usage("--faces-in-columns and --faces-in-rows contradict each other; give one")
+	}
+	return nil
+}
+
+// list names some kinds: a, b or c.
+func list(kinds []source.Kind) string {
+	var out strings.Builder
+	for i, k := range kinds {
+		switch {
+		case i > 0 && i == len(kinds)-1:
+			out.WriteString(" or ")
+		case i > 0:
+			out.WriteString(", ")
+		}
+		out.WriteString(string(k))
+	}
+	return out.String()
 }
 
 // words checks flags whose values are words or sizes.
@@ -138,13 +160,21 @@ func kindOf(as string, args []string) (source.Kind, error) {
 	case as != "" && slices.Contains(kinds, source.Kind(as)):
 		return source.Kind(as), nil
 	case as != "":
-		return "", usage("--as %q; one of %v was expected", as, kinds)
+		return "", usage("--as %q; %s was expected", as, list(kinds))
 	case strings.HasSuffix(name, ".npy"):
 		return source.Grid, nil
 	case strings.HasSuffix(name, ".mtx"), strings.HasSuffix(name, ".mtx.gz"):
 		return source.Matrix, nil
 	}
 	return "", usage("%s: what is in it is never guessed; %s", name, kindsHelp)
+}
+
+// named is a list of one name, or of none.
+func named(file string) []string {
+	if file == "" {
+		return nil
+	}
+	return []string{file}
 }
 
 func inputsThere(paths []string) error {
@@ -167,7 +197,7 @@ var units = []struct {
 // parseBytes reads a size; "" is 80 % of the smaller of the cgroup's limit and RAM.
 func parseBytes(s string) (uint64, error) {
 	if s == "" {
-		return defaultMemory(), nil
+		return system.defaultMemory(), nil
 	}
 	for _, u := range units {
 		if digits, ok := strings.CutSuffix(s, u.name); ok {
@@ -177,36 +207,4 @@ func parseBytes(s string) (uint64, error) {
 		}
 	}
 	return 0, usage("--memory %q; a size like 8GiB or 500MB was expected", s)
-}
-
-func defaultMemory() uint64 {
-	var info unix.Sysinfo_t
-	if unix.Sysinfo(&info) != nil {
-		return 0
-	}
-	total := info.Totalram * uint64(info.Unit)
-	if b, err := os.ReadFile("/sys/fs/cgroup/memory.max"); err == nil {
-		if limit, err := strconv.ParseUint(strings.TrimSpace(string(b)), 10, 64); err == nil {
-			total = min(total, limit)
-		}
-	}
-	return total / 10 * 8
-}
-
-// defaultThreads is the number of CPUs allowed by affinity and cgroup quota.
-func defaultThreads() int {
-	var set unix.CPUSet
-	n := 1
-	if unix.SchedGetaffinity(0, &set) == nil {
-		n = max(set.Count(), 1)
-	}
-	b, err := os.ReadFile(filepath.Join("/sys/fs/cgroup", "cpu.max"))
-	if f := strings.Fields(string(b)); err == nil && len(f) == 2 && f[0] != "max" {
-		quota, _ := strconv.ParseFloat(f[0], 64)
-		period, _ := strconv.ParseFloat(f[1], 64)
-		if quota > 0 && period > 0 {
-			n = min(n, max(1, int(quota/period)))
-		}
-	}
-	return n
 }

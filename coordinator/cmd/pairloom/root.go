@@ -4,11 +4,9 @@ package main
 
 import (
 	"context"
-	"encoding/json"
 	"fmt"
 	"os"
 	"runtime/debug"
-	"strings"
 
 	"github.com/spf13/cobra"
 
@@ -44,20 +42,24 @@ boundary matrices, reduces them here or on a crew of workers, and publishes Bett
 numbers and persistence pairs with evidence that they are right. For research: no
 diagnosis and no safety decision may rest on the results alone.
 
-A first step:  pairloom reduce volume.npy --out result`,
+A first step:  pairloom reduce volume.npy --out result
+says what came out, and leaves pairs.csv, betti.csv and summary.json in result.`,
+		Example:       "  pairloom reduce points.csv --as points --degrees 1",
 		SilenceErrors: true,
 		SilenceUsage:  true,
+		Args:          unknownCommand,
+		RunE:          func(c *cobra.Command, _ []string) error { return c.Help() },
 	}
-	root.SetFlagErrorFunc(func(c *cobra.Command, err error) error {
-		return exit.With(exit.Usage, fmt.Errorf("%w; see pairloom %s --help", err, c.Name()))
-	})
+	root.SuggestionsMinimumDistance = 2
+	root.SetFlagErrorFunc(flagError)
 	for _, c := range commands() {
 		if check := c.Args; check != nil {
 			c.Args = func(c *cobra.Command, args []string) error {
-				if err := check(c, args); err != nil {
-					return exit.With(exit.Usage, fmt.Errorf("%w; see pairloom %s --help", err, c.Name()))
+				if err := check(c, args); err != nil && exit.Code(err) != exit.Usage {
+					return usage("%w; see %s --help", err, c.CommandPath())
+				} else {
+					return err
 				}
-				return nil
 			}
 		}
 		root.AddCommand(c)
@@ -67,6 +69,8 @@ A first step:  pairloom reduce volume.npy --out result`,
 
 func versionCommand() *cobra.Command {
 	return &cobra.Command{Use: "version", Short: "Print the version of this build", Args: cobra.NoArgs, Example: "  pairloom version",
+		Long: `Version prints the release, and the revision where the build knows it. A coordinator
+and its workers must be of one version.`,
 		RunE: func(c *cobra.Command, _ []string) error {
 			_, err := fmt.Fprintln(c.OutOrStdout(), version())
 			return err
@@ -79,15 +83,7 @@ func run(ctx context.Context, root *cobra.Command) int {
 	if err == nil {
 		return exit.Done
 	}
-	code := exit.Code(err)
-	if strings.HasPrefix(err.Error(), "unknown command") {
-		code = exit.Usage
-	}
-	fmt.Fprintln(root.ErrOrStderr(), "pairloom: "+strings.ReplaceAll(err.Error(), "\n", " "))
-	if f := c.Flags().Lookup("json"); f != nil && f.Value.String() == "true" && c.Name() == "reduce" {
-		_ = json.NewEncoder(root.OutOrStdout()).Encode(map[string]any{"error": err.Error(), "code": code})
-	}
-	return code
+	return tellFailure(c, root.OutOrStdout(), root.ErrOrStderr(), err)
 }
 
 func main() {
