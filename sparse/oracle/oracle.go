@@ -61,17 +61,29 @@ func sum(a, b []uint32) []uint32 {
 	return append(append(out, a...), b...)
 }
 
-// Essential returns the k-cells in no pair, ascending.
-func (p Pairs) Essential(k int) (cells []uint32) {
-	deaths := map[uint32]bool{}
+// Births returns the k-cells that begin a class, ascending: those that kill none.
+func (p Pairs) Births(k int) (cells []uint32) {
+	kills := make([]bool, len(p.Mate[k]))
 	if k > 0 {
 		for _, j := range p.Mate[k-1] {
-			deaths[j] = j != block.None
+			if j != block.None {
+				kills[j] = true
+			}
 		}
 	}
-	for i, j := range p.Mate[k] {
-		if j == block.None && !deaths[uint32(i)] {
+	for i := range p.Mate[k] {
+		if !kills[i] {
 			cells = append(cells, uint32(i))
+		}
+	}
+	return cells
+}
+
+// Essential returns the k-cells in no pair, ascending.
+func (p Pairs) Essential(k int) (cells []uint32) {
+	for _, i := range p.Births(k) {
+		if p.Mate[k][i] == block.None {
+			cells = append(cells, i)
 		}
 	}
 	return cells
