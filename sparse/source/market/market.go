@@ -1,13 +1,18 @@
 // Package market streams sparse matrices over Z/2 in Matrix Market form (.mtx,
 // .mtx.gz): coordinate, general, with pattern, integer or real (whole) entries,
 // taken mod 2. Indices are 1-based in the file and 0-based here. A declared size is
-// believed only as far as the bytes of the file can hold it, and memory is taken as
-// entries arrive. Not safe for concurrent use.
+// believed only as far as the bytes of the file can hold it, and an entry is handed
+// out as it arrives: no memory is taken by an announcement. Repeated entries come out
+// as often as they stand there, in the file's order.
+//
+// Cost: O(bytes); two buffers of 1 MiB, no allocation an entry. Not safe for
+// concurrent use.
 package market
 
 import (
 	"bufio"
 	"bytes"
+	"compress/flate"
 	"compress/gzip"
 	"errors"
 	"io"
@@ -16,7 +21,6 @@ import (
 	"strings"
 
 	"pairloom/sparse/source"
-	"pairloom/sparse/source/table"
 )
 
 const (
@@ -28,13 +32,16 @@ const (
 	lineMost     = 1 << 16
 	bytesEntry   = 4 // the shortest line of an entry: "1 1\n"
 	sniffedBytes = 2
+	digitsMost   = 19      // of a row or column: fits 64 bits
+	exponentMost = 1 << 20 // beyond it every digit is on one side of the point
 )
 
 // Reader reads one matrix, entry by entry.
 type Reader struct {
 	path     string
 	file     *os.File
-	counted  *counter
+	counted  *counter // bytes of the file
+	inflated *counter // bytes of text; the same where nothing is compressed
 	in       *bufio.Reader
 	line     int
 	pattern  bool
@@ -46,7 +53,7 @@ type Reader struct {
 	size     uint64
 }
 
-// counter counts the bytes read of the file.
+// counter counts the bytes that pass.
 type counter struct {
 	r io.Reader
 	n uint64
@@ -83,6 +90,7 @@ func (r *Reader) start() error {
 	}
 	r.size = uint64(info.Size())
 	r.counted = &counter{r: r.file}
+	r.inflated = r.counted
 	r.in = bufio.NewReaderSize(r.counted, bufferBytes)
 	most := r.size
 	if magic, _ := r.in.Peek(sniffedBytes); len(magic) == 2 && magic[0] == 0x1f && magic[1] == 0x8b {
@@ -90,7 +98,8 @@ func (r *Reader) start() error {
 		if err != nil {
 			return source.Broken(r.path, 0, "not a gzip file: %v", err)
 		}
-		r.in = bufio.NewReaderSize(z, bufferBytes)
+		r.inflated = &counter{r: z}
+		r.in = bufio.NewReaderSize(r.inflated, bufferBytes)
 		most *= inflateMost
 	}
 	if err := r.banner(); err != nil {
@@ -114,10 +123,10 @@ func (r *Reader) text() ([]byte, error) {
 
 // ended tells the end of the file from a broken stream.
 func (r *Reader) ended(err error) error {
-	switch {
-	case err == io.EOF:
+	if err == io.EOF {
 		return io.EOF
-	case errors.Is(err, io.ErrUnexpectedEOF), errors.Is(err, gzip.ErrChecksum), errors.Is(err, gzip.ErrHeader), strings.Contains(err.Error(), "flate"):
+	}
+	if errors.Is(err, io.ErrUnexpectedEOF) || errors.Is(err, gzip.ErrChecksum) || errors.Is(err, gzip.ErrHeader) || errors.As(err, new(flate.CorruptInputError)) {
 		return source.Broken(r.path, r.line+1, "the compressed file is damaged or cut short: %v", err)
 	}
 	return err
@@ -138,11 +147,11 @@ func (r *Reader) banner() error {
 	r.pattern, r.real = f[3] == "pattern", f[3] == "real"
 	switch {
 	case f[2] != "coordinate":
-		return source.Broken(r.path, 1, "format %q; only coordinate (sparse) matrices are boundary matrices", f[2])
+		return source.Broken(r.path, 1, "format %q; only coordinate (sparse) matrices are boundary matrices", clip(f[2]))
 	case !r.pattern && !r.real && f[3] != "integer":
-		return source.Broken(r.path, 1, "entries are %q; pattern, integer or real (whole numbers) was expected", f[3])
+		return source.Broken(r.path, 1, "entries are %q; pattern, integer or real (whole numbers) was expected", clip(f[3]))
 	case f[4] != "general":
-		return source.Broken(r.path, 1, "symmetry %q; a boundary matrix is general", f[4])
+		return source.Broken(r.path, 1, "symmetry %q; a boundary matrix is general", clip(f[4]))
 	}
 	return nil
 }
@@ -180,9 +189,9 @@ func (r *Reader) sizeLine(most uint64) error {
 	}
 }
 
-// whole reads a whole number of up to 19 digits.
+// whole reads a whole number of up to digitsMost digits.
 func whole(b []byte) (uint64, bool) {
-	if len(b) == 0 || len(b) > 19 {
+	if len(b) == 0 || len(b) > digitsMost {
 		return 0, false
 	}
 	v := uint64(0)
@@ -203,10 +212,7 @@ func (r *Reader) Next() (row, col uint32, odd bool, err error) {
 	for {
 		line, err := r.text()
 		if err == io.EOF {
-			if r.seen < r.declared {
-				return 0, 0, false, source.Broken(r.path, r.line, "the file ends after %d of %d entries", r.seen, r.declared)
-			}
-			return 0, 0, false, io.EOF
+			return 0, 0, false, r.finish()
 		}
 		if err != nil {
 			return 0, 0, false, err
@@ -216,6 +222,18 @@ func (r *Reader) Next() (row, col uint32, odd bool, err error) {
 		}
 		return r.entry(line)
 	}
+}
+
+// finish checks at the end of the file what was announced at its beginning; the text
+// of a compressed file has its true length only now.
+func (r *Reader) finish() error {
+	switch most := sizePerByte*r.inflated.n + slack; {
+	case r.seen < r.declared:
+		return source.Broken(r.path, r.line, "the file ends after %d of %d entries", r.seen, r.declared)
+	case uint64(r.rows) > most || uint64(r.cols) > most:
+		return source.Broken(r.path, 0, "%d rows and %d columns; more than %d bytes of text can mean (8 a byte and 2^20)", r.rows, r.cols, r.inflated.n)
+	}
+	return io.EOF
 }
 
 func (r *Reader) entry(line []byte) (row, col uint32, odd bool, err error) {
@@ -243,7 +261,8 @@ func (r *Reader) entry(line []byte) (row, col uint32, odd bool, err error) {
 	return uint32(x - 1), uint32(y - 1), odd, nil
 }
 
-func clip(b []byte) []byte { return b[:min(len(b), 40)] }
+// clip keeps a message to one line.
+func clip[T string | []byte](b T) T { return b[:min(len(b), 40)] }
 
 func (r *Reader) form() string {
 	if r.pattern {
@@ -264,32 +283,78 @@ func token(line []byte, at int) (t []byte, end int) {
 	return line[from:at], at
 }
 
-// parity reads a whole number mod 2.
+// parity reads a whole number mod 2, of any length.
 func (r *Reader) parity(v []byte) (odd, ok bool) {
-	digits := v
-	if digits[0] == '-' || digits[0] == '+' {
-		digits = digits[1:]
+	if v[0] == '-' || v[0] == '+' {
+		v = v[1:]
 	}
-	if n := len(digits); n > 0 && onlyDigits(digits) {
-		return digits[n-1]&1 == 1, true
+	if n := digits(v); n == len(v) {
+		return n > 0 && v[n-1]&1 == 1, n > 0
 	}
 	if !r.real {
 		return false, false
 	}
-	x, ok := table.ParseFloat(v)
-	if !ok || x != math.Trunc(x) || math.IsInf(x, 0) {
-		return false, false
-	}
-	return math.Mod(math.Abs(x), 2) == 1, true
+	return decimal(v)
 }
 
-func onlyDigits(b []byte) bool {
-	for _, c := range b {
+// digits counts the digits that b begins with.
+func digits(b []byte) int {
+	for i, c := range b {
 		if c-'0' > 9 {
-			return false
+			return i
 		}
 	}
-	return true
+	return len(b)
+}
+
+// decimal reads digits[.digits][e±digits] mod 2, exactly: the number is whole if every
+// digit right of the point, moved by the exponent, is 0.
+func decimal(v []byte) (odd, ok bool) {
+	n := digits(v)
+	left, right, rest := v[:n], v[n:n], v[n:]
+	if len(rest) > 0 && rest[0] == '.' {
+		n = digits(rest[1:])
+		right, rest = rest[1:1+n], rest[1+n:]
+	}
+	exponent, ok := power(rest)
+	if !ok || len(left)+len(right) == 0 {
+		return false, false
+	}
+	point := len(left) + exponent // digits left of the moved point
+	for i, part := range [2][]byte{left, right} {
+		for j, c := range part {
+			at := i*len(left) + j
+			if at >= point && c != '0' {
+				return false, false
+			}
+			odd = odd || at == point-1 && c&1 == 1
+		}
+	}
+	return odd, true
+}
+
+// power reads the exponent of a decimal, 0 where there is none.
+func power(b []byte) (exponent int, ok bool) {
+	if len(b) == 0 {
+		return 0, true
+	}
+	if b[0] != 'e' && b[0] != 'E' {
+		return 0, false
+	}
+	b, sign := b[1:], 1
+	if len(b) > 0 && (b[0] == '-' || b[0] == '+') {
+		if b[0] == '-' {
+			sign = -1
+		}
+		b = b[1:]
+	}
+	if len(b) == 0 || digits(b) != len(b) {
+		return 0, false
+	}
+	for _, c := range b {
+		exponent = min(10*exponent+int(c-'0'), exponentMost)
+	}
+	return sign * exponent, true
 }
 
 // Line returns the 1-based number of the line read last.
