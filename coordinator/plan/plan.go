@@ -91,23 +91,17 @@ func route(k, rich int, o Options) (Route, string) {
 // poor is the share of a degree's cells below which an estimated Betti number is noise.
 const poor = 0.002
 
-// Ranks estimates the ranks of ∂_0..∂_(top+1) from the cell counts, as if there were no
-// homology but one component: each block kills all that the one below it left.
-func Ranks(c *chain.Complex) []float64 {
-	ranks := make([]float64, c.Top()+2)
-	for k := 1; k <= c.Top(); k++ {
-		left := float64(c.Cells[k-1]) - ranks[k-1]
-		if k == 1 {
-			left--
-		}
-		ranks[k] = min(float64(c.Cells[k]), max(left, 0))
-	}
-	return ranks
-}
-
 // richest estimates from counts alone which degree has most homology; 0 if none does.
 func richest(c *chain.Complex) int {
-	ranks := Ranks(c)
+	ranks := make([]float64, c.Top()+2)
+	for k := 1; k <= c.Top(); k++ {
+		n := float64(c.Cells[k])
+		if k == 1 {
+			ranks[k] = min(n, max(float64(c.Cells[0])-1, 0))
+			continue
+		}
+		ranks[k] = min(n, max(float64(c.Cells[k-1])-ranks[k-1], 0))
+	}
 	best, at := 0.0, 0
 	for k := 1; k <= c.Top(); k++ {
 		b := float64(c.Cells[k]) - ranks[k] - ranks[k+1]
@@ -130,22 +124,17 @@ const (
 // TilesAWorker is how many tiles a worker gets.
 const TilesAWorker = 8
 
-// Seconds predicts what a core needs to reduce so many residual columns out of columns.
-func Seconds(residual, columns uint64) float64 {
-	each := secondsThin
-	if float64(residual) > heavyShare*float64(columns) {
-		each = secondsHeavy
-	}
-	return float64(residual) * each
-}
-
 // Workers decides how many of a crew share a block: predicted reduction time divided
 // by 100 ms a core, at least one.
 func Workers(residual, columns uint64, threadsEach, crew int, o Options) int {
 	if o.Spread {
 		return crew
 	}
-	cores := Seconds(residual, columns) / secondsCore
+	each := secondsThin
+	if float64(residual) > heavyShare*float64(columns) {
+		each = secondsHeavy
+	}
+	cores := float64(residual) * each / secondsCore
 	return max(1, min(crew, int(cores/float64(max(threadsEach, 1)))))
 }
 

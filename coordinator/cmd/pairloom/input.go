@@ -201,7 +201,7 @@ func parseBytes(s string) (uint64, error) {
 	}
 	for _, u := range units {
 		if digits, ok := strings.CutSuffix(s, u.name); ok {
-			if v, err := strconv.ParseFloat(strings.TrimSpace(digits), 64); err == nil && v > 0 && v*u.bytes < 1<<62 {
+			if v, err := strconv.ParseFloat(strings.TrimSpace(digits), 64); err == nil && v*u.bytes >= 1 && v*u.bytes < 1<<62 {
 				return uint64(v * u.bytes), nil
 			}
 		}

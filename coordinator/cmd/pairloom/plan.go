@@ -34,22 +34,20 @@ type outlook struct {
 	Truncated bool           `json:"truncated"`
 	Blocks    []blockOutlook `json:"blocks"` // in solving order
 	Memory    uint64         `json:"memory_bytes"`
-	Seconds   float64        `json:"reduce_seconds"` // of one core
 }
 
 // blockOutlook is one block. Columns and residual are those of its route; how many
 // columns a neighbour that is solved before clears is estimated from the cell counts.
 type blockOutlook struct {
-	Degree   int     `json:"degree"`
-	Method   string  `json:"method"`
-	Route    string  `json:"route"`
-	Reason   string  `json:"route_reason"`
-	Nonzeros uint64  `json:"nonzeros"`
-	Columns  uint64  `json:"columns"`
-	Residual uint64  `json:"residual"`
-	Seconds  float64 `json:"reduce_seconds"`
-	Workers  int     `json:"workers"`
-	Tiles    int     `json:"tiles"`
+	Degree   int    `json:"degree"`
+	Method   string `json:"method"`
+	Route    string `json:"route"`
+	Reason   string `json:"route_reason"`
+	Nonzeros uint64 `json:"nonzeros"`
+	Columns  uint64 `json:"columns"`
+	Residual uint64 `json:"residual"`
+	Workers  int    `json:"workers"`
+	Tiles    int    `json:"tiles"`
 }
 
 type planFlags struct {
@@ -130,7 +128,7 @@ func (f *planFlags) look(ctx context.Context, folder string, spec source.Spec, o
 		o.Memory += bytesCell * uint64(n)
 	}
 	show.Stage("compress")
-	v := &view{folder: folder, complex: complex, options: options, ranks: plan.Ranks(complex), solved: map[int]bool{}}
+	v := &view{folder: folder, complex: complex, options: options, ranks: ranks(complex), solved: map[int]bool{}}
 	for _, b := range plan.Blocks(complex, options) {
 		look, err := f.block(ctx, v, b)
 		if err != nil {
@@ -138,7 +136,6 @@ func (f *planFlags) look(ctx context.Context, folder string, spec source.Spec, o
 		}
 		o.Blocks = append(o.Blocks, look)
 		o.Memory += bytesEntry * look.Nonzeros
-		o.Seconds += look.Seconds
 	}
 	return o, nil
 }
@@ -148,7 +145,7 @@ type view struct {
 	folder  string
 	complex *chain.Complex
 	options plan.Options
-	ranks   []float64
+	ranks   []uint64
 	solved  map[int]bool // blocks before
 }
 
@@ -179,12 +176,25 @@ func (f *planFlags) block(ctx context.Context, v *view, b plan.Block) (blockOutl
 		o.Residual -= done.Apparent
 	}
 	if b.Clear && v.solved[neighbour] {
-		o.Residual -= min(o.Residual, uint64(v.ranks[neighbour]))
+		o.Residual -= min(o.Residual, v.ranks[neighbour])
 	}
-	o.Seconds = plan.Seconds(o.Residual, o.Columns)
 	o.Workers = plan.Workers(o.Residual, o.Columns, f.threads/f.workers, f.workers, v.options)
 	o.Tiles = reduce.Cut(rows, o.Workers, cmp.Or(v.options.PerTile, plan.TilesAWorker)).Tiles
 	return o, nil
+}
+
+// ranks estimates the ranks of ∂_0..∂_(top+1) from the cell counts, as if there were no
+// homology but one component: each block kills all that the one below it left.
+func ranks(c *chain.Complex) []uint64 {
+	list := make([]uint64, c.Top()+2)
+	for k := 1; k <= c.Top(); k++ {
+		left := uint64(c.Cells[k-1]) - list[k-1]
+		if k == 1 && left > 0 {
+			left--
+		}
+		list[k] = min(uint64(c.Cells[k]), left)
+	}
+	return list
 }
 
 // tell says the plan in words.
@@ -198,12 +208,12 @@ func (o *outlook) tell(w io.Writer) error {
 			fmt.Fprintf(w, "nothing to reduce: %s.\n", b.Reason)
 			continue
 		}
-		fmt.Fprintf(w, "%s route (%s); about %d of %d columns are left to reduce, about %.2g s of one core; workers: %d, tiles: %d.\n",
-			b.Route, b.Reason, b.Residual, b.Columns, b.Seconds, b.Workers, b.Tiles)
+		fmt.Fprintf(w, "%s route (%s); about %d of %d columns are left to reduce; workers: %d, tiles: %d.\n",
+			b.Route, b.Reason, b.Residual, b.Columns, b.Workers, b.Tiles)
 	}
 	if o.Truncated {
 		fmt.Fprintf(w, "The complex is cut above degree %d.\n", len(o.Cells)-2)
 	}
-	_, err := fmt.Fprintf(w, "Memory: about %d MiB. Reduction: about %.2g s of one core, once all is read and compressed.\n", o.Memory>>20, o.Seconds)
+	_, err := fmt.Fprintf(w, "Memory: about %d MiB.\n", o.Memory>>20)
 	return err
 }

@@ -97,6 +97,9 @@ func (f *reduceFlags) place() (*place, error) {
 
 // reduce runs the job and writes its result aside.
 func (f *reduceFlags) reduce(ctx context.Context, c *cobra.Command, p *place, spec source.Spec, options plan.Options, began time.Time) (*report.Summary, error) {
+	if ctx.Err() != nil {
+		return nil, context.Cause(ctx)
+	}
 	show := newMeter(c.ErrOrStderr(), f.quiet)
 	defer show.End()
 	run, err := inprocess.Run(ctx, inprocess.Config{Version: version(), Workers: f.workers, Threads: f.threads},

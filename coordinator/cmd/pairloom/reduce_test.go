@@ -3,14 +3,18 @@ package main
 import (
 	"bytes"
 	"compress/gzip"
+	"context"
 	"encoding/json"
+	"io"
 	"os"
 	"path/filepath"
+	"runtime"
 	"strings"
 	"testing"
 
 	"github.com/stretchr/testify/require"
 
+	"pairloom/coordinator/plan"
 	"pairloom/sparse/exit"
 )
 
@@ -113,6 +117,14 @@ func TestExitCodes(t *testing.T) {
 		{exit.Usage, []string{"reduce", points}},
 		{exit.Usage, []string{"reduce"}},
 		{exit.Usage, []string{"nonsense"}},
+		{exit.Usage, []string{"reduc", points}},
+		{exit.Usage, []string{"plan"}},
+		{exit.Usage, []string{"version", "more"}},
+		{exit.Usage, []string{"plan", points, "--as", "points", "--threads", "0"}},
+		{exit.Usage, []string{"reduce", points, "--as", "points", "-z"}},
+		{exit.Usage, []string{"reduce", points, "--as", "points", "--out"}},
+		{exit.Done, nil},
+		{exit.Done, []string{"help", "reduce"}},
 		{exit.Usage, []string{"reduce", points, "--nonsense"}},
 		{exit.Usage, []string{"reduce", points, "--as", "pebbles"}},
 		{exit.Usage, []string{"reduce", points, "--as", "points", "--voxels", "cells"}},
@@ -122,6 +134,8 @@ func TestExitCodes(t *testing.T) {
 		{exit.NoInput, []string{"reduce", "missing.npy"}},
 		{exit.TooBig, []string{"reduce", points, "--as", "points", "--memory", "100B"}},
 		{exit.CannotOut, []string{"reduce", points, "--as", "points", "--out", full}},
+		{exit.CannotOut, []string{"reduce", points, "--as", "points", "--out", points}},
+		{exit.CannotOut, []string{"reduce", points, "--as", "points", "--jobs", points}},
 	} {
 		_, stderr, code := command(t, c.args...)
 		require.Equal(t, c.code, code, "%v: %s", c.args, stderr)
@@ -147,4 +161,139 @@ func TestReduceWritesItsResult(t *testing.T) {
 		require.Contains(t, s, key)
 	}
 	require.NoDirExists(t, filepath.Join(one, "job"))
+}
+
+// With --json a failure is one object on stdout too.
+func TestFailuresAsJSON(t *testing.T) {
+	for _, c := range []struct {
+		code int
+		args []string
+	}{
+		{exit.NoInput, []string{"reduce", "missing.npy"}},
+		{exit.BadInput, []string{"plan", file(t, "broken.npy", "<&>")}},
+		{exit.Usage, []string{"reduce", "a.npy", "--as", "pebbles"}},
+	} {
+		out, stderr, code := command(t, append(c.args, "--json")...)
+		require.Equal(t, c.code, code)
+		var f failure
+		require.NoError(t, json.Unmarshal([]byte(out), &f), out)
+		require.Equal(t, failure{strings.TrimSuffix(strings.TrimPrefix(stderr, "pairloom: "), "\n"), code}, f)
+	}
+}
+
+// SIGINT and SIGTERM cancel the context: exit code 75, and nothing is left, whether the
+// job has not begun or is at work.
+func TestStopped(t *testing.T) {
+	in := grid(t, 24)
+	for _, args := range [][]string{{"reduce", in, "--out", filepath.Join(t.TempDir(), "out")}, {"plan", in}} {
+		ctx, cancel := context.WithCancel(t.Context())
+		cancel()
+		require.Equal(t, exit.Stopped, silently(ctx, args...))
+		if len(args) > 2 {
+			require.NoDirExists(t, args[3])
+		}
+	}
+	out := filepath.Join(t.TempDir(), "out")
+	ctx, cancel := context.WithCancel(t.Context())
+	defer cancel()
+	go cancelWhen(ctx, cancel, filepath.Join(out, "job", "order"))
+	require.Equal(t, exit.Stopped, silently(ctx, "reduce", grid(t, 96), "--out", out))
+	require.NoDirExists(t, out)
+}
+
+func silently(ctx context.Context, args ...string) int {
+	root := rootCommand()
+	root.SetArgs(args)
+	root.SetOut(io.Discard)
+	root.SetErr(io.Discard)
+	return run(ctx, root)
+}
+
+// cancelWhen cancels as soon as a folder is there.
+func cancelWhen(ctx context.Context, cancel context.CancelFunc, folder string) {
+	for ctx.Err() == nil {
+		if _, err := os.Stat(folder); err == nil {
+			cancel()
+		}
+		runtime.Gosched()
+	}
+}
+
+// --replace takes the place of the old result after success only; --jobs and --keep-job
+// say where the job folder is and that it stays.
+func TestPlaces(t *testing.T) {
+	points := file(t, "p.csv", "0,0\n0,1\n1,0\n1,1\n")
+	out, jobs := t.TempDir(), filepath.Join(t.TempDir(), "jobs")
+	for _, name := range []string{"pairs.csv", "mine.txt"} {
+		require.NoError(t, os.WriteFile(filepath.Join(out, name), []byte("old"), 0o644))
+	}
+	_, _, code := command(t, "reduce", points, "--as", "points", "--out", out, "--replace", "--memory", "100B")
+	require.Equal(t, exit.TooBig, code)
+	require.Equal(t, "old", string(read(t, out, "pairs.csv")))
+	_, stderr, code := command(t, "reduce", points, "--as", "points", "--out", out, "--replace", "--jobs", jobs)
+	require.Zero(t, code, stderr)
+	require.Contains(t, string(read(t, out, "pairs.csv")), "0,0,inf,0,")
+	require.Equal(t, []string{"betti.csv", "mine.txt", "pairs.csv", "summary.json"}, names(t, out))
+	require.Empty(t, names(t, jobs))
+	_, stderr, code = command(t, "reduce", points, "--as", "points", "--jobs", jobs, "--keep-job")
+	require.Zero(t, code, stderr)
+	require.Len(t, names(t, jobs), 1)
+}
+
+func names(t *testing.T, folder string) (list []string) {
+	entries, err := os.ReadDir(folder)
+	require.NoError(t, err)
+	for _, e := range entries {
+		list = append(list, e.Name())
+	}
+	return list
+}
+
+// Every command teaches: what it does, and one worked example.
+func TestHelp(t *testing.T) {
+	for _, c := range commands() {
+		require.NotEmpty(t, c.Short, c.Name())
+		require.Contains(t, c.Example, "pairloom "+c.Name())
+		out, _, code := command(t, c.Name(), "--help")
+		require.Zero(t, code)
+		require.Contains(t, out, c.Example)
+	}
+	out, _, _ := command(t)
+	require.Contains(t, out, "A first step")
+}
+
+// The plan of a grid: blocks 1 and 3 are graphs, block 2 is reduced.
+func TestPlanOfAGrid(t *testing.T) {
+	in := grid(t, 8)
+	text, stderr, code := command(t, "plan", in, "--json")
+	require.Zero(t, code, stderr)
+	var o outlook
+	require.NoError(t, json.Unmarshal([]byte(text), &o))
+	require.Equal(t, []uint32{512, 1344, 1176, 343}, o.Cells, "8³ vertices and the cells between them")
+	require.Len(t, o.Blocks, 3)
+	var reduced blockOutlook
+	for _, b := range o.Blocks {
+		require.Equal(t, 2*uint64(b.Degree)*uint64(o.Cells[b.Degree]), b.Nonzeros, "a k-cube has 2k facets")
+		if b.Method == string(plan.Reduce) {
+			reduced = b
+		}
+	}
+	require.Equal(t, 2, reduced.Degree)
+	require.Positive(t, reduced.Residual)
+	require.Less(t, reduced.Residual, reduced.Columns)
+	require.Equal(t, 8, reduced.Tiles)
+	text, _, code = command(t, "plan", in)
+	require.Zero(t, code)
+	require.Contains(t, text, "Degree 1: 1344 cells.\n")
+	require.Regexp(t, `Block 2: 4704 entries; boundary route \(.*\); about \d+ of 1176 columns are left`, text)
+}
+
+// The demo says what came out. From the array itself: its one highest point is 1076 at
+// (297, 219), so the last loop to be filled is filled there; (343, 194) has 877.
+func TestDemo(t *testing.T) {
+	out, stderr, code := command(t, "reduce", "../../../bench/demo/jacksboro-fault.npy", "--quiet")
+	require.Zero(t, code, stderr)
+	require.Contains(t, out, "A grid complex of 553035 cells, dimension 2.\n")
+	require.Contains(t, out, "Degree 0: 1 connected component at the end")
+	require.Contains(t, out, "    from 877 (cell 343 194) to 1076 (cell 297 219), a length of 199\n")
 }
