@@ -45,8 +45,12 @@ func Run(ctx context.Context, cfg Config, job coordinator.Job, watch func(coordi
 		up, down := Pipe(ctx)
 		wg.Go(func() { _ = c.Join(ctx, up) })
 		wg.Go(func() { _ = w.Serve(ctx, down); down.Close() })
-		number := <-w.Number
-		carrier.add(number, w)
+		select {
+		case number := <-w.Number:
+			carrier.add(number, w)
+		case <-ctx.Done(): // stopped before it joined
+			return nil, context.Cause(ctx)
+		}
 	}
 	if err := c.Wait(ctx, n); err != nil {
 		return nil, err
