@@ -47,7 +47,7 @@ func reduceBlock(columns [][]uint32, owner []uint32) {
 
 // sum is the symmetric difference of two ascending lists.
 func sum(a, b []uint32) []uint32 {
-	var out []uint32
+	out := make([]uint32, 0, len(a)+len(b))
 	for len(a) > 0 && len(b) > 0 {
 		switch {
 		case a[0] < b[0]:
