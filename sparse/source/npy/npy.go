@@ -167,10 +167,7 @@ func (r *Reader) fill() error {
 // decode turns the first len(dst) items of raw into float64, −0 into 0. It returns
 // the index of the first value that is not exact, or −1.
 func (h *Header) decode(dst []float64, raw []byte) int {
-	var order binary.ByteOrder = binary.LittleEndian
-	if h.BigEndian {
-		order = binary.BigEndian
-	}
+	big := h.BigEndian
 	raw = raw[:len(dst)*h.item]
 	switch h.DType {
 	case "u8":
@@ -179,25 +176,27 @@ func (h *Header) decode(dst []float64, raw []byte) int {
 		}
 	case "u16":
 		for i := range dst {
-			dst[i] = float64(order.Uint16(raw[2*i:]))
+			dst[i] = float64(load16(raw[2*i:], big))
 		}
 	case "i16":
 		for i := range dst {
-			dst[i] = float64(int16(order.Uint16(raw[2*i:])))
+			dst[i] = float64(int16(load16(raw[2*i:], big)))
 		}
 	case "i32":
 		for i := range dst {
-			dst[i] = float64(int32(order.Uint32(raw[4*i:])))
+			dst[i] = float64(int32(load32(raw[4*i:], big)))
 		}
 	case "f32":
-		h.decode32(dst, raw)
+		for i := range dst {
+			dst[i] = source.Clean(float64(math.Float32frombits(load32(raw[4*i:], big))))
+		}
 	case "f64":
 		for i := range dst {
-			dst[i] = source.Clean(math.Float64frombits(order.Uint64(raw[8*i:])))
+			dst[i] = source.Clean(math.Float64frombits(load64(raw[8*i:], big)))
 		}
 	case "i64":
 		for i := range dst {
-			v := int64(order.Uint64(raw[8*i:]))
+			v := int64(load64(raw[8*i:], big))
 			if !exact(v) {
 				return i
 			}
@@ -207,15 +206,29 @@ func (h *Header) decode(dst []float64, raw []byte) int {
 	return -1
 }
 
-// decode32 is the commonest case without an indirect call per value.
-func (h *Header) decode32(dst []float64, raw []byte) {
-	for i := range dst {
-		u := binary.LittleEndian.Uint32(raw[4*i:])
-		if h.BigEndian {
-			u = bits.ReverseBytes32(u)
-		}
-		dst[i] = source.Clean(float64(math.Float32frombits(u)))
+// load16, load32 and load64 read a number of either byte order without an indirect call.
+func load16(raw []byte, big bool) uint16 {
+	u := binary.LittleEndian.Uint16(raw)
+	if big {
+		u = bits.ReverseBytes16(u)
 	}
+	return u
+}
+
+func load32(raw []byte, big bool) uint32 {
+	u := binary.LittleEndian.Uint32(raw)
+	if big {
+		u = bits.ReverseBytes32(u)
+	}
+	return u
+}
+
+func load64(raw []byte, big bool) uint64 {
+	u := binary.LittleEndian.Uint64(raw)
+	if big {
+		u = bits.ReverseBytes64(u)
+	}
+	return u
 }
 
 // exact says whether a float64 holds v: at most 53 bits between its first and last one.
