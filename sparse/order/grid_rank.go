@@ -31,16 +31,13 @@ func (g *gridJob) rank(ctx context.Context, centres uint32) error {
 func (g *gridJob) rankDegree(ctx context.Context, k int, centres uint32) (uint32, error) {
 	d := g.grid
 	star := make([]uint32, centres) // cells in the star of a centre, then the next rank in it
-	err := d.cells(ctx, k, 0, d.lines(), func(_ point, from, to int) error {
-		at := d.at[from:to]
-		for x := 0; x < len(at); x += 2 {
-			if c := at[x]; c != block.None {
-				star[c]++
-			}
+	if k == d.centreDegree() {      // these are ranks already
+		for c := range star {
+			star[c] = uint32(c) + 1
 		}
-		return nil
-	})
-	if err != nil {
+		return centres, g.tableOf(k, centres, star)
+	}
+	if err := d.points(ctx, k, func(c *uint32) { star[*c]++ }); err != nil {
 		return 0, err
 	}
 	sum := uint32(0)
@@ -50,20 +47,36 @@ func (g *gridJob) rankDegree(ctx context.Context, k int, centres uint32) (uint32
 	if sum == 0 {
 		return 0, nil
 	}
-	err = d.cells(ctx, k, 0, d.lines(), func(_ point, from, to int) error {
-		at := d.at[from:to]
-		for x := 0; x < len(at); x += 2 {
-			if c := at[x]; c != block.None {
-				at[x] = star[c]
-				star[c]++
-			}
-		}
-		return nil
+	err := d.points(ctx, k, func(c *uint32) {
+		r := star[*c]
+		star[*c]++
+		*c = r
 	})
 	if err != nil {
 		return 0, err
 	}
 	return sum, g.tableOf(k, sum, star)
+}
+
+// centreDegree is the degree of the centres.
+func (d *doubled) centreDegree() int {
+	if d.top {
+		return d.dim
+	}
+	return 0
+}
+
+// points visits the k-cells inside the complex in the order of their points.
+func (d *doubled) points(ctx context.Context, k int, visit func(at *uint32)) error {
+	return d.cells(ctx, k, 0, d.lines(), func(_ point, from, to int) error {
+		at := d.at[from:to]
+		for x := 0; x < len(at); x += 2 {
+			if at[x] != block.None {
+				visit(&at[x])
+			}
+		}
+		return nil
+	})
 }
 
 // tableOf writes the cell table of degree k from the ends of the stars.
