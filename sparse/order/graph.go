@@ -9,163 +9,129 @@ import (
 
 	"pairloom/sparse/chain"
 	"pairloom/sparse/source"
-	"pairloom/sparse/source/table"
 )
 
-// network is an edge list as it was read: every line an edge between labels.
-type network struct {
-	path   string
-	labels map[string]uint32 // label → order of appearance
-	names  []string          // by order of appearance
-	from   []uint32
-	to     []uint32
-	values []float64
-	valued bool
-	header []string
-}
-
 // Graph reads lines u,v[,value] and publishes the flag complex of the simple graph in
-// dir: parallel edges (in either direction) merged at their least value, self-loops
-// left out, both counted; vertices enter at 0, edges without values at 1. All edges are
-// kept, or those up to spec.MaxScale. Vertices are numbers if all labels are whole
-// numbers, and spec.Vertices adds isolated ones; otherwise labels, in bytewise order.
-// The summary of the directed multigraph, every line an edge, is in Complex.Graph.
-// Errors: *source.InputError, *source.UsageError, *source.TooBig.
+// dir, which exists: parallel edges (in either direction) merged at their least value,
+// self-loops left out, both counted in notes; vertices enter at 0, edges without values
+// at 1, a simplex with its longest edge. All edges are kept, or those up to
+// spec.MaxScale. Degrees K, default 1; simplices up to degree K+1 are made.
+//
+// Vertices. If all labels are whole numbers below 2^32−1, vertices are the numbers that
+// occur, and all below spec.Vertices. Else they are the labels, in bytewise order, and
+// spec.Vertices may not ask for more. So the order of lines changes nothing.
+//
+// Complex.Graph treats the file as a directed multigraph, every line an edge: the rank
+// of its incidence matrix is vertices − components, a self-loop has an empty column.
+//
+// Errors: *source.InputError naming the line, *source.UsageError, *source.TooBig before
+// anything is built; ctx's cause; what the system says. After an error no file is left
+// in dir. Memory: 8 to 32 bytes a line while edges are merged (labels: 16 to 40 bytes
+// and their text each), then as Points.
 func Graph(ctx context.Context, spec source.Spec, dir string, threads int, p source.Progress) (*chain.Complex, error) {
+	path, err := oneInput(spec)
+	if err != nil {
+		return nil, err
+	}
+	if err := checkScale(spec); err != nil {
+		return nil, err
+	}
 	p.Stage("read")
-	g := &network{path: spec.Inputs[0], labels: map[string]uint32{}}
+	g := &network{path: path, complex: &chain.Complex{Kind: string(source.Graph)}}
+	defer g.free()
 	if err := g.read(ctx, p); err != nil {
 		return nil, err
 	}
-	c := &chain.Complex{Kind: string(source.Graph), KeepZero: spec.KeepZeroPairs}
-	number, n, err := g.number(spec, c)
+	p.Stage("order")
+	n, err := g.number(spec)
 	if err != nil {
 		return nil, err
 	}
-	c.Graph = g.counts(number, n)
-	edges := g.simple(spec, number, c)
-	return newFlag(g.path, n, edges).complex(ctx, spec, c, dir, threads, p)
+	g.summary(n)
+	simple := g.simple(spec)
+	g.free()
+	return newFlag(path, n, simple).complex(ctx, spec, g.complex, dir, threads, p)
 }
 
-func (g *network) read(ctx context.Context, p source.Progress) error {
-	in, err := table.Open(g.path)
-	if err != nil {
-		return err
+// number turns the ends of edges into vertices 0..n−1.
+func (g *network) number(spec source.Spec) (n uint32, err error) {
+	if uint64(max(spec.Vertices, 0)) >= math.MaxUint32 {
+		return 0, &source.UsageError{Why: fmt.Sprintf("--vertices %d; at most 2^32-2 are possible", spec.Vertices)}
 	}
-	defer in.Close()
-	for in.Next() {
-		if len(g.from)%4096 == 0 {
-			p.Advance(in.BytesRead(), in.Size())
-			if ctx.Err() != nil {
-				return context.Cause(ctx)
-			}
+	switch least := uint32(max(spec.Vertices, 0)); {
+	case g.names != nil:
+		err = g.byName(least)
+		n = uint32(len(g.names))
+	default:
+		n, err = g.byNumber(least, spec.MemoryBytes)
+	}
+	if err == nil && n == 0 {
+		err = source.Broken(g.path, 0, "no edge in it and no --vertices; u,v[,value] was expected in each line")
+	}
+	return n, err
+}
+
+// byNumber numbers the vertices that occur and all below least, in their order.
+func (g *network) byNumber(least uint32, budget uint64) (uint32, error) {
+	ends := []*degreeTable{{k: 1, verts: g.ends}}
+	found := labelsOf(ends)
+	above := found[lowerBound(found, least):]
+	n := uint64(least) + uint64(len(above))
+	if budget > 0 && n*bytesVertex > budget {
+		return 0, &source.TooBig{Why: fmt.Sprintf("%s: %d vertices need %d bytes and %d are allowed; lower --vertices or raise --memory", g.path, n, n*bytesVertex, budget)}
+	}
+	if len(above) == 0 || above[len(above)-1] == uint32(n-1) {
+		return uint32(n), nil // dense as they are
+	}
+	all := make([]uint32, n)
+	for v := range least {
+		all[v] = v
+	}
+	copy(all[least:], above)
+	densify(ends, all)
+	g.complex.Labels = make([]string, n)
+	for i, v := range all {
+		g.complex.Labels[i] = strconv.FormatUint(uint64(v), 10)
+	}
+	return uint32(n), nil
+}
+
+func lowerBound(sorted []uint32, v uint32) int {
+	at, _ := slices.BinarySearch(sorted, v)
+	return at
+}
+
+// byName numbers the labels in bytewise order.
+func (g *network) byName(least uint32) error {
+	if int(least) > len(g.names) {
+		return &source.UsageError{Why: fmt.Sprintf("--vertices %d: %s names its %d vertices by labels, and isolated ones would have none; number the vertices, or leave --vertices out", least, g.path, len(g.names))}
+	}
+	order := make([]uint32, len(g.names))
+	for i := range order {
+		order[i] = uint32(i)
+	}
+	slices.SortFunc(order, func(a, b uint32) int {
+		if g.names[a] < g.names[b] {
+			return -1
 		}
-		if err := g.line(in); err != nil {
-			return err
-		}
+		return 1
+	})
+	number, labels := make([]uint32, len(g.names)), make([]string, len(g.names))
+	for at, i := range order {
+		number[i], labels[at] = uint32(at), g.names[i]
 	}
-	g.header = in.Header()
-	return in.Err()
-}
-
-func (g *network) line(in *table.Reader) error {
-	f := in.Fields()
-	if len(g.from) == 0 {
-		g.valued = len(f) == 3
+	for i, v := range g.ends {
+		g.ends[i] = number[v]
 	}
-	switch {
-	case len(f) != 2 && len(f) != 3:
-		return source.Broken(g.path, in.Line(), "%d fields; an edge u,v or u,v,value was expected", len(f))
-	case g.valued != (len(f) == 3):
-		return source.Broken(g.path, in.Line(), "%d fields; either all edges have a value or none", len(f))
-	case len(f[0]) == 0 || len(f[1]) == 0:
-		return source.Broken(g.path, in.Line(), "an endpoint is empty; u,v was expected")
-	}
-	value := 1.0
-	if g.valued {
-		v, ok := table.ParseFloat(f[2])
-		if !ok || math.IsNaN(v) || math.IsInf(v, 0) || v < 0 {
-			return source.Broken(g.path, in.Line(), "value %q; a finite number of at least 0 was expected", f[2])
-		}
-		value = source.Clean(v)
-	}
-	g.from, g.to, g.values = append(g.from, g.label(f[0])), append(g.to, g.label(f[1])), append(g.values, value)
-	return nil
-}
-
-func (g *network) label(b []byte) uint32 {
-	i, ok := g.labels[string(b)]
-	if !ok {
-		i = uint32(len(g.names))
-		g.names = append(g.names, string(b))
-		g.labels[g.names[i]] = i
-	}
-	return i
-}
-
-// number gives every label its vertex: position among all, sorted.
-func (g *network) number(spec source.Spec, c *chain.Complex) (number []uint32, n uint32, err error) {
-	ids, numeric := g.numeric()
-	if !numeric {
-		return g.byName(spec, c)
-	}
-	all := slices.Clone(ids)
-	for v := range uint32(max(spec.Vertices, 0)) {
-		all = append(all, v)
-	}
-	slices.Sort(all)
-	all = slices.Compact(all)
-	number = make([]uint32, len(ids))
-	for i, id := range ids {
-		at, _ := slices.BinarySearch(all, id)
-		number[i] = uint32(at)
-	}
-	if n = uint32(len(all)); n > 0 && all[n-1] != n-1 {
-		for _, id := range all {
-			c.Labels = append(c.Labels, strconv.FormatUint(uint64(id), 10))
-		}
-	}
-	return number, n, g.empty(n)
-}
-
-func (g *network) empty(n uint32) error {
-	if n == 0 {
-		return source.Broken(g.path, 0, "no edge in it and no --vertices; u,v[,value] was expected in each line")
+	g.complex.Labels = labels
+	if g.header != nil && g.values == nil {
+		g.complex.Notes = append(g.complex.Notes, chain.Note{What: fmt.Sprintf("first line taken as a header, as it has no number: %q", g.header), Count: 1})
 	}
 	return nil
 }
 
-// numeric returns the labels as numbers if they all are.
-func (g *network) numeric() ([]uint32, bool) {
-	ids := make([]uint32, len(g.names))
-	for i, name := range g.names {
-		id, ok := table.ParseUint32([]byte(name))
-		if !ok || strconv.FormatUint(uint64(id), 10) != name {
-			return nil, false
-		}
-		ids[i] = id
-	}
-	return ids, true
-}
-
-func (g *network) byName(spec source.Spec, c *chain.Complex) (number []uint32, n uint32, err error) {
-	if spec.Vertices > len(g.names) {
-		return nil, 0, &source.UsageError{Why: fmt.Sprintf("--vertices %d: %s names its %d vertices by labels, and isolated ones would have none; number the vertices, or leave --vertices out", spec.Vertices, g.path, len(g.names))}
-	}
-	c.Labels = slices.Sorted(slices.Values(g.names))
-	number = make([]uint32, len(g.names))
-	for i, name := range c.Labels {
-		number[g.labels[name]] = uint32(i)
-	}
-	if g.header != nil && !g.valued {
-		c.Notes = append(c.Notes, chain.Note{What: fmt.Sprintf("first line taken as a header, as it has no number: %q", g.header), Count: 1})
-	}
-	return number, uint32(len(c.Labels)), nil
-}
-
-// counts treats the file as a directed multigraph: the rank of its incidence matrix is
-// vertices − components; a self-loop has an empty column.
-func (g *network) counts(number []uint32, n uint32) *chain.GraphCounts {
+// summary counts components by union–find.
+func (g *network) summary(n uint32) {
 	up := make([]uint32, n)
 	for v := range up {
 		up[v] = uint32(v)
@@ -178,50 +144,71 @@ func (g *network) counts(number []uint32, n uint32) *chain.GraphCounts {
 		return x
 	}
 	rank := uint64(0)
-	for i := range g.from {
-		if a, b := find(number[g.from[i]]), find(number[g.to[i]]); a != b {
-			up[a] = b
+	for i := 0; i < len(g.ends); i += 2 {
+		if a, b := find(g.ends[i]), find(g.ends[i+1]); a != b {
+			up[max(a, b)] = min(a, b)
 			rank++
 		}
 	}
-	edges := uint64(len(g.from))
-	return &chain.GraphCounts{Vertices: uint64(n), Edges: edges, Rank: rank, Components: uint64(n) - rank, Loops: edges - rank}
+	edges := uint64(len(g.ends) / 2)
+	g.complex.Graph = &chain.GraphCounts{Vertices: uint64(n), Edges: edges, Rank: rank, Components: uint64(n) - rank, Loops: edges - rank}
 }
 
-// simple lists the edges of the simple graph.
-func (g *network) simple(spec source.Spec, number []uint32, c *chain.Complex) []edge {
-	var edges []edge
-	loops, beyond := uint64(0), uint64(0)
-	for i := range g.from {
-		u, v := number[g.from[i]], number[g.to[i]]
-		switch {
-		case u == v:
-			loops++
-		case spec.MaxScale != nil && g.values[i] > *spec.MaxScale:
+// simple lists the edges of the simple graph, and notes what it left out.
+func (g *network) simple(spec source.Spec) *pairs {
+	lines := g.withoutLoops()
+	loops := len(g.ends)/2 - lines
+	ends := g.ends[:2*lines]
+	var own, other array[uint64]
+	defer own.free()
+	items := own.make(lines)
+	byEnds := &sorting{key: func(i uint32) uint64 { return uint64(ends[2*i])<<32 | uint64(ends[2*i+1]) }}
+	byEnds.sort(items, other.make(lines))
+	other.free()
+	p, n, parallel, beyond := newPairs(lines), 0, 0, 0
+	for i := 0; i < lines; {
+		first, value := uint32(items[i]), math.Inf(1)
+		j := i
+		for ; j < lines && byEnds.key(uint32(items[j])) == byEnds.key(first); j++ {
+			value = min(value, g.value(uint32(items[j])))
+		}
+		parallel += j - i - 1
+		if i = j; spec.MaxScale != nil && value > *spec.MaxScale {
 			beyond++
-		default:
-			edges = append(edges, edge{min(u, v), max(u, v), g.values[i]})
+			continue
 		}
+		p.u[n], p.v[n], p.value[n] = ends[2*first], ends[2*first+1], value
+		n++
 	}
-	slices.SortFunc(edges, func(a, b edge) int {
-		switch {
-		case a.u != b.u:
-			return int(int64(a.u) - int64(b.u))
-		case a.v != b.v:
-			return int(int64(a.v) - int64(b.v))
-		case a.value < b.value:
-			return -1
-		case a.value > b.value:
-			return 1
-		}
-		return 0
-	})
-	before := len(edges)
-	edges = slices.CompactFunc(edges, func(a, b edge) bool { return a.u == b.u && a.v == b.v })
-	for _, note := range []chain.Note{{What: "self-loops left out", Count: loops}, {What: "parallel edges merged", Count: uint64(before - len(edges))}, {What: "edges beyond --max-scale left out", Count: beyond}} {
+	p.u, p.v, p.value = p.u[:n], p.v[:n], p.value[:n]
+	for _, note := range []chain.Note{{What: "self-loops left out", Count: uint64(loops)}, {What: "parallel edges merged", Count: uint64(parallel)}, {What: "edges beyond --max-scale left out", Count: uint64(beyond)}} {
 		if note.Count > 0 {
-			c.Notes = append(c.Notes, note)
+			g.complex.Notes = append(g.complex.Notes, note)
 		}
 	}
-	return edges
+	return p
+}
+
+// withoutLoops moves the edges that are no loops to the front, smaller end first, and
+// returns their number.
+func (g *network) withoutLoops() (n int) {
+	for i := 0; i < len(g.ends); i += 2 {
+		u, v := g.ends[i], g.ends[i+1]
+		if u == v {
+			continue
+		}
+		g.ends[2*n], g.ends[2*n+1] = min(u, v), max(u, v)
+		if g.values != nil {
+			g.values[n] = g.values[i/2]
+		}
+		n++
+	}
+	return n
+}
+
+func (g *network) value(i uint32) float64 {
+	if g.values == nil {
+		return 1
+	}
+	return g.values[i]
 }

@@ -2,11 +2,8 @@ package order
 
 import (
 	"context"
-	"fmt"
 	"io"
 	"math"
-	"slices"
-	"strconv"
 	"strings"
 
 	"pairloom/sparse/chain"
@@ -15,158 +12,120 @@ import (
 	"pairloom/sparse/source/table"
 )
 
-// bytesEdge is what an edge takes while a flag complex is prepared.
-const bytesEdge = 64
-
-// rows is a dense array of numbers, one point or one line of a matrix a row.
-type rows struct {
-	path string
-	n, d int
-	at   []float64 // n × d
-}
-
-func (r *rows) row(i int) []float64 { return r.at[i*r.d : (i+1)*r.d] }
-
-// Points reads points (one a line of text, or .npy of shape N × d or N) and publishes
-// their flag complex in dir, which exists: edges by Euclidean distance up to
-// spec.MaxScale, or up to the enclosing radius, beyond which the diagram does not
-// change. Degrees: K, default 1; simplices up to degree K+1 are made. Errors:
-// *source.InputError, *source.TooBig. Time: O(N²·d) and what the complex takes, or,
-// with a scale, the pairs whose first coordinates are within it.
+// Points reads points (one a line of text, or .npy of shape N × d or N), numbered from
+// 0, and publishes their flag complex in dir, which exists: edges by Euclidean distance
+// up to spec.MaxScale, or up to the enclosing radius (the least over all points of the
+// distance to the farthest other one), beyond which the diagram does not change.
+// Vertices enter at 0, a simplex with its longest edge. Degrees K, default 1; simplices
+// up to degree K+1 are made. threads goroutines at most, all ended on return.
+//
+// Errors: *source.InputError for the file, *source.TooBig, with the counts and the
+// scale that would fit, before anything is built; ctx's cause; what the system says.
+// After an error no file is left in dir.
+//
+// Time: with a scale, the pairs within it and those in neighbouring cells of a grid;
+// without, up to O(N²·d). Then O(Σ over edges of the degrees of their ends) and what
+// the complex takes. Memory: 8 bytes a coordinate, about 60 an edge, 8k + 16 a
+// k-simplex, 4(k−1) more below the highest degree; the written pages are in it.
 func Points(ctx context.Context, spec source.Spec, dir string, threads int, p source.Progress) (*chain.Complex, error) {
+	path, err := oneInput(spec)
+	if err != nil {
+		return nil, err
+	}
 	p.Stage("read")
-	pts, err := readRows(ctx, spec.Inputs[0], p)
+	s := &cloud{path: path, budget: spec.MemoryBytes}
+	defer s.free()
+	if err := s.read(ctx, p); err != nil {
+		return nil, err
+	}
+	c := &chain.Complex{Kind: string(source.Points)}
+	e := &edgeSearch{path: path, spec: spec, complex: c, metric: s, held: 8 * uint64(len(s.at)), threads: threads, progress: p}
+	f, err := e.run(ctx)
 	if err != nil {
 		return nil, err
 	}
-	c := &chain.Complex{Kind: string(source.Points), KeepZero: spec.KeepZeroPairs}
-	scale, err := scaleOf(ctx, spec, c, pts.n, threads, func(i int, most float64) (float64, error) {
-		far := 0.0
-		for j := range pts.n {
-			if far = max(far, distance(pts.row(i), pts.row(j))); far > most {
-				break
-			}
-		}
-		return far, nil
-	})
-	if err != nil {
-		return nil, err
-	}
-	edges, err := pts.edges(ctx, spec, scale)
-	if err != nil {
-		return nil, err
-	}
-	return newFlag(spec.Inputs[0], uint32(pts.n), edges).complex(ctx, spec, c, dir, threads, p)
+	s.free()
+	return f.complex(ctx, spec, c, dir, threads, p)
 }
 
-// distance is the Euclidean distance of two points.
-func distance(a, b []float64) float64 {
-	sum := 0.0
-	for i, x := range a {
-		sum += (x - b[i]) * (x - b[i])
+func oneInput(spec source.Spec) (string, error) {
+	if len(spec.Inputs) != 1 {
+		return "", &source.UsageError{Why: string(spec.Kind) + ": exactly one input file was expected"}
 	}
-	return math.Sqrt(sum)
+	return spec.Inputs[0], nil
 }
 
-// edges lists the pairs within scale: points are walked along their first coordinate,
-// so that pairs further apart in it alone are never looked at.
-func (r *rows) edges(ctx context.Context, spec source.Spec, scale float64) ([]edge, error) {
-	order := make([]int, r.n)
-	for i := range order {
-		order[i] = i
-	}
-	slices.SortFunc(order, func(a, b int) int {
-		if r.row(a)[0] != r.row(b)[0] {
-			if r.row(a)[0] < r.row(b)[0] {
-				return -1
-			}
-			return 1
-		}
-		return a - b
-	})
-	var edges []edge
-	for i, a := range order {
-		if i%64 == 0 && ctx.Err() != nil {
-			return nil, context.Cause(ctx)
-		}
-		for _, b := range order[i+1:] {
-			if r.row(b)[0]-r.row(a)[0] > scale {
-				break
-			}
-			if d := distance(r.row(a), r.row(b)); d <= scale {
-				edges = append(edges, edge{uint32(min(a, b)), uint32(max(a, b)), d})
-			}
-		}
-		if err := edgesFit(spec, len(edges)); err != nil {
-			return nil, err
-		}
-	}
-	return edges, nil
+// cloud is a set of points.
+type cloud struct {
+	path   string
+	budget uint64
+	n, d   int
+	at     []float64 // n × d
+	own    array[float64]
+	cells  *buckets // set by prepare
 }
 
-func edgesFit(spec source.Spec, n int) error {
-	if need := uint64(n) * bytesEdge; spec.MemoryBytes > 0 && need > spec.MemoryBytes {
-		return &source.TooBig{Why: fmt.Sprintf("%s: more than %d edges, %d MiB, and --memory allows %d MiB; use a smaller --max-scale", spec.Inputs[0], n, need>>20, spec.MemoryBytes>>20)}
+func (s *cloud) free() {
+	s.at, s.cells = nil, nil
+	s.own.free()
+}
+
+func (s *cloud) point(i int) []float64 { return s.at[i*s.d : i*s.d+s.d] }
+
+func (s *cloud) read(ctx context.Context, p source.Progress) error {
+	read := s.text
+	if strings.HasSuffix(s.path, ".npy") {
+		read = s.array
 	}
+	if err := read(ctx, p); err != nil {
+		return err
+	}
+	return s.checkSpread()
+}
+
+// grow makes room for n more numbers, within the budget.
+func (s *cloud) grow(n int) error {
+	if len(s.at)+n <= cap(s.at) {
+		return nil
+	}
+	to := len(s.at) + max(n, min(len(s.at), 1<<24), 1<<12)
+	if s.budget > 0 && 8*uint64(len(s.at)+n) > s.budget {
+		return &source.TooBig{Why: source.Broken(s.path, 0, "the numbers in it alone take more than the %d bytes allowed; raise --memory", s.budget).Error()}
+	}
+	s.at = s.own.grow(s.at, to)
 	return nil
 }
 
-// scaleOf returns the longest edge to keep: spec.MaxScale, or the enclosing radius,
-// the least over all vertices of the distance to the farthest other one. far(i, most)
-// returns that distance for vertex i, or anything above most once it exceeds it.
-func scaleOf(ctx context.Context, spec source.Spec, c *chain.Complex, n, threads int, far func(i int, most float64) (float64, error)) (float64, error) {
-	if spec.MaxScale != nil {
-		return *spec.MaxScale, nil
-	}
-	radius := math.Inf(1)
-	for i := range n {
-		if i%64 == 0 && ctx.Err() != nil {
-			return 0, context.Cause(ctx)
-		}
-		r, err := far(i, radius)
-		if err != nil {
-			return 0, err
-		}
-		radius = min(radius, r)
-	}
-	c.Notes = append(c.Notes, chain.Note{What: "cut at the enclosing radius " + strconv.FormatFloat(radius, 'g', -1, 64) + ", beyond which nothing changes; points", Count: uint64(n)})
-	return radius, nil
-}
-
-// readRows reads a table of finite numbers with equally many in each line, or an array
-// of one or two axes.
-func readRows(ctx context.Context, path string, p source.Progress) (*rows, error) {
-	if strings.HasSuffix(path, ".npy") {
-		return readArrayRows(path)
-	}
-	in, err := table.Open(path)
+func (s *cloud) text(ctx context.Context, p source.Progress) error {
+	in, err := table.Open(s.path)
 	if err != nil {
-		return nil, err
+		return err
 	}
 	defer in.Close()
-	r := &rows{path: path}
-	for in.Next() {
-		if r.n%4096 == 0 {
+	for ; in.Next(); s.n++ {
+		if s.n%4096 == 0 {
 			p.Advance(in.BytesRead(), in.Size())
 			if ctx.Err() != nil {
-				return nil, context.Cause(ctx)
+				return context.Cause(ctx)
 			}
 		}
-		if r.n == 0 {
-			r.d = len(in.Fields())
+		if s.n == 0 {
+			s.d = len(in.Fields())
 		}
-		if len(in.Fields()) != r.d {
-			return nil, source.Broken(path, in.Line(), "%d numbers; %d were expected, as in the lines before", len(in.Fields()), r.d)
+		if len(in.Fields()) != s.d {
+			return source.Broken(s.path, in.Line(), "%d numbers; %d were expected, as in the lines before", len(in.Fields()), s.d)
 		}
-		if r.at, err = numbers(path, in, r.at); err != nil {
-			return nil, err
+		if err := s.grow(s.d); err != nil {
+			return err
 		}
-		r.n++
+		if s.at, err = numbers(s.path, in, s.at); err != nil {
+			return err
+		}
 	}
-	if in.Err() == nil && r.n == 0 {
-		return nil, source.Broken(path, 0, "no data in it; one line of numbers for each point was expected")
+	if in.Err() == nil && s.n == 0 {
+		return source.Broken(s.path, 0, "no data in it; one line of numbers for each point was expected")
 	}
-	return r, in.Err()
+	return in.Err()
 }
 
 // numbers appends the finite numbers of a line.
@@ -181,44 +140,89 @@ func numbers(path string, in *table.Reader, to []float64) ([]float64, error) {
 	return to, nil
 }
 
-func readArrayRows(path string) (*rows, error) {
-	in, err := npy.Open(path)
+func (s *cloud) array(ctx context.Context, p source.Progress) error {
+	in, err := npy.Open(s.path)
 	if err != nil {
-		return nil, err
+		return err
 	}
 	defer in.Close()
 	h := in.Header()
-	r := &rows{path: path, d: 1}
-	switch len(h.Shape) {
+	switch s.n, s.d = 0, 1; len(h.Shape) {
 	case 1:
-		r.n = h.Shape[0]
+		s.n = h.Shape[0]
 	case 2:
-		r.n, r.d = h.Shape[0], h.Shape[1]
+		s.n, s.d = h.Shape[0], h.Shape[1]
 	default:
-		return nil, source.Broken(path, 0, "%d axes; an array of shape N × d was expected", len(h.Shape))
+		return source.Broken(s.path, 0, "%d axes; an array of shape N × d was expected, one point a row", len(h.Shape))
 	}
-	flat := make([]float64, in.Len())
-	for at := 0; at < len(flat); {
-		n, err := in.Read(flat[at:])
+	if err := s.grow(in.Len()); err != nil {
+		return err
+	}
+	s.at = s.at[:in.Len()]
+	buf := make([]float64, 1<<14)
+	for at := 0; at < len(s.at); {
+		if ctx.Err() != nil {
+			return context.Cause(ctx)
+		}
+		n, err := in.Read(buf)
+		if err != nil && err != io.EOF {
+			return err
+		}
+		for q, v := range buf[:n] {
+			i, j := (at+q)/s.d, (at+q)%s.d
+			if h.Fortran && len(h.Shape) == 2 {
+				i, j = (at+q)%s.n, (at+q)/s.n
+			}
+			if math.IsNaN(v) || math.IsInf(v, 0) {
+				return source.Broken(s.path, 0, "entry [%d, %d] is %v; a finite number was expected", i, j, v)
+			}
+			s.at[i*s.d+j] = v
+		}
 		at += n
-		if err != nil && (err != io.EOF || at < len(flat)) {
-			return nil, err
+		p.Advance(uint64(at), uint64(len(s.at)))
+	}
+	return nil
+}
+
+// checkSpread refuses points so far apart that squares of distances overflow.
+func (s *cloud) checkSpread() error {
+	sum := 0.0
+	for _, x := range s.extents() {
+		sum += (x.high - x.low) * (x.high - x.low)
+	}
+	if math.IsInf(sum, 1) {
+		return source.Broken(s.path, 0, "the points are so far apart that squares of distances overflow; scale the coordinates down")
+	}
+	return nil
+}
+
+// size implements metric.
+func (s *cloud) size() int { return s.n }
+
+// square is the squared Euclidean distance; the conversion forbids fused operations, so
+// that all machines round alike.
+func square(a, b []float64) (sum float64) {
+	b = b[:len(a)]
+	for i, x := range a {
+		sum += float64((x - b[i]) * (x - b[i]))
+	}
+	return sum
+}
+
+// farthest implements metric.
+func (s *cloud) farthest(u int, most float64) float64 {
+	far, a := 0.0, s.point(u)
+	limit := above(most)
+	for v := range s.n {
+		if far = max(far, square(a, s.point(v))); far > limit {
+			break
 		}
 	}
-	r.at = flat
-	if h.Fortran && len(h.Shape) == 2 {
-		r.at = make([]float64, len(flat))
-		for i, v := range flat {
-			r.at[i%r.n*r.d+i/r.n] = v
-		}
-	}
-	for i, v := range r.at {
-		if math.IsNaN(v) || math.IsInf(v, 0) {
-			return nil, source.Broken(path, 0, "entry [%d, %d] is %v; finite numbers were expected", i/r.d, i%r.d, v)
-		}
-	}
-	if r.n == 0 || r.d == 0 {
-		return nil, source.Broken(path, 0, "no data in it; an array of shape N × d was expected")
-	}
-	return r, nil
+	return math.Sqrt(far)
+}
+
+// above is a bound for the squares of distances up to a scale: what is above it is
+// above the scale, whatever was rounded.
+func above(scale float64) float64 {
+	return scale*scale*(1+1e-9) + math.SmallestNonzeroFloat64
 }

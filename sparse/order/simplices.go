@@ -111,9 +111,6 @@ func (s *simplicial) fits(spec source.Spec, top int) error {
 // value, rank; then sorting items and either a sorted copy or written pages.
 func bytesListed(k int) uint64 { return uint64(8*(k+1) + 40) }
 
-// bytesSimplex estimates the same for flag complexes.
-func bytesSimplex(k int) uint64 { return uint64(12*(k+1) + 56) }
-
 func budget(spec source.Spec, tables []*degreeTable) error {
 	need, counts := uint64(0), make([]int, len(tables))
 	for k, d := range tables {

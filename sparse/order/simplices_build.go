@@ -15,10 +15,10 @@ import (
 )
 
 // simplicial turns sorted tables of simplices into a filtered complex. Each degree is
-// put in order (by value, by longest edge; for lower stars lexicographic order is the
-// order); facets are found by binary search among the simplices with the same first
-// vertex, while cofaces are walked in lexicographic order, which keeps the searches in
-// cache; columns are written where their rank is.
+// put in order (by value; for lower stars lexicographic order is the order); facets are
+// found by binary search among the simplices with the same first vertex, while cofaces
+// are walked in lexicographic order, which keeps the searches in cache; columns are
+// written where their rank is.
 //
 // Time: O(entries · log of a vertex's simplices). Memory beside the tables: 4 bytes a
 // simplex, 16 more a simplex of the degrees being ordered, and the pages of the files
@@ -28,7 +28,6 @@ type simplicial struct {
 	tables  []*degreeTable
 	labels  []uint32  // dense number → vertex as given: ascending, or by rank for lower stars
 	centres []float64 // lower stars: value of each vertex, by rank
-	flag    *flag     // flag complexes only: order by longest edge
 	complex *chain.Complex
 
 	rankOf [][]uint32 // per degree: lexicographic index → rank; nil: they are equal
@@ -199,17 +198,6 @@ func (s *simplicial) fill(cells *chain.Cells, d *degreeTable, items []uint64) {
 // nil if they stand in it, and what frees their memory.
 func (s *simplicial) sorted(d *degreeTable) (items []uint64, free func()) {
 	var a, b array[uint64]
-	if s.flag != nil {
-		each := make([]Item, d.len())
-		for i := range each {
-			each[i].Index = uint32(i)
-		}
-		items = a.make(d.len())
-		for r, it := range s.flag.sorted(d, each) {
-			items[r] = uint64(it.Index)
-		}
-		return items, a.free
-	}
 	if d.values == nil || inOrder(d.values) {
 		return nil, func() {}
 	}

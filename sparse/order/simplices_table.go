@@ -15,8 +15,6 @@ type degreeTable struct {
 	verts  []uint32
 	values []float64 // one a simplex; nil where every value is 0 or comes from centres
 
-	longest []uint32 // flag complexes: rank of the longest edge
-
 	vertsAt  array[uint32] // memory of verts and values, unless they are on the heap
 	valuesAt array[float64]
 }
@@ -55,7 +53,7 @@ func (d *degreeTable) add(s []uint32, value float64, valued bool) {
 
 // free drops the simplices and their memory.
 func (d *degreeTable) free() {
-	d.verts, d.values, d.longest = nil, nil, nil
+	d.verts, d.values = nil, nil
 	d.vertsAt.free()
 	d.valuesAt.free()
 }
