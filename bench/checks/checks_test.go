@@ -268,7 +268,7 @@ func squared(p [][]float64) func(i, j int) float64 {
 func TestFlagDiagrams(t *testing.T) {
 	road := table(t, "eurodist_km.csv")
 	check(t, "rips_eurodist", distances(t, len(road), func(i, j int) float64 { return road[i][j] }, 3, 1e9))
-	for _, n := range []int{9, 12} {
+	for _, n := range []int{9, 12, 15} {
 		steps := func(i, j int) float64 { k := max(i-j, j-i); return float64(min(k, n-k)) }
 		check(t, fmt.Sprintf("circle_%d_steps", n), distances(t, n, steps, n-1, 1e9))
 	}
@@ -290,6 +290,53 @@ func TestFlagDiagrams(t *testing.T) {
 	path := filepath.Join(t.TempDir(), "g.csv")
 	require.NoError(t, os.WriteFile(path, []byte(b.String()), 0o644))
 	check(t, "flag_les_miserables", source.Spec{Kind: source.Graph, Inputs: []string{path}, Degrees: 8})
+}
+
+// classes are the pairwise distances of a polytope's vertices by their rank 1, 2, 3 …:
+// shortest first, which tells exactly what rounded coordinates would not.
+func classes(p [][]float64) func(i, j int) float64 {
+	d := squared(p)
+	var all []float64
+	for i := range p {
+		for j := range i {
+			if !slices.ContainsFunc(all, func(v float64) bool { return math.Abs(v-d(i, j)) < 1e-6 }) {
+				all = append(all, d(i, j))
+			}
+		}
+	}
+	slices.Sort(all)
+	return func(i, j int) float64 {
+		if i == j {
+			return 0
+		}
+		return 1 + float64(slices.IndexFunc(all, func(v float64) bool { return math.Abs(v-d(i, j)) < 1e-6 }))
+	}
+}
+
+// signs lists the points (±a, ±b, ±c), each once, with their cyclic shifts if asked.
+func signs(a, b, c float64, shifts bool) (out [][]float64) {
+	for range map[bool]int{false: 1, true: 3}[shifts] {
+		for s := range 8 {
+			q := []float64{a * float64(1-2*(s&1)), b * float64(1-(s&2)), c * float64(1-(s&4)/2)}
+			if !slices.ContainsFunc(out, func(o []float64) bool { return slices.Equal(o, q) }) {
+				out = append(out, q)
+			}
+		}
+		a, b, c = b, c, a
+	}
+	return out
+}
+
+// Polytopes: all simplices of the cube, icosahedron (12 vertices) and dodecahedron (20).
+func TestPolytopeDiagrams(t *testing.T) {
+	golden := (1 + math.Sqrt(5)) / 2
+	cube := signs(1, 1, 1, false)
+	ico := signs(0, 1, golden, true)
+	dode := append(signs(1, 1, 1, false), signs(0, 1/golden, golden, true)...)
+	require.Equal(t, []int{8, 12, 20}, []int{len(cube), len(ico), len(dode)})
+	check(t, "polytope_cube", distances(t, 8, classes(cube), 7, 1e9))
+	check(t, "polytope_icosahedron", distances(t, 12, classes(ico), 11, 1e9))
+	check(t, "polytope_dodecahedron", distances(t, 20, classes(dode), 4, 1e9))
 }
 
 // The deaths in degree 0 of a point cloud are the edges of its minimum spanning tree

@@ -124,18 +124,33 @@ const (
 // TilesAWorker is how many tiles a worker gets.
 const TilesAWorker = 8
 
+// each is what a residual column costs, in seconds.
+func each(residual, columns uint64) float64 {
+	if float64(residual) > heavyShare*float64(columns) {
+		return secondsHeavy
+	}
+	return secondsThin
+}
+
 // Workers decides how many of a crew share a block: predicted reduction time divided
 // by 100 ms a core, at least one.
 func Workers(residual, columns uint64, threadsEach, crew int, o Options) int {
 	if o.Spread {
 		return crew
 	}
-	each := secondsThin
-	if float64(residual) > heavyShare*float64(columns) {
-		each = secondsHeavy
-	}
-	cores := float64(residual) * each / secondsCore
+	cores := float64(residual) * each(residual, columns) / secondsCore
 	return max(1, min(crew, int(cores/float64(max(threadsEach, 1)))))
+}
+
+// secondsEntry is what an entry of a block costs apart from the reduction, measured on
+// grids and triangulations: read, ordered, written, surveyed, checked twice, reported.
+const secondsEntry = 150e-9
+
+// Seconds predicts the CPU seconds that a block takes, reduction included, from its
+// entries and residual columns. A lead within a small factor, not a promise: fill-in
+// does not show in counts.
+func Seconds(residual, columns, nonzeros uint64) float64 {
+	return secondsEntry*float64(nonzeros) + each(residual, columns)*float64(residual)
 }
 
 // RecheckLimit is the number of residual columns up to which every block gets a second answer.

@@ -50,6 +50,7 @@ type member struct {
 	hello   *pb.Hello
 	link    Link
 	sending sync.Mutex
+	spent   float64 // CPU seconds up to the end of the last job
 }
 
 func (m *member) send(o *pb.Order) error {

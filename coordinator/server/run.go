@@ -66,6 +66,9 @@ func (c *Coordinator) end(r *run) {
 	c.events = nil
 	if r.m != nil {
 		c.number = r.m.Next()
+		for id, m := range r.crew { // workers count since they joined, jobs from here on
+			m.spent = max(m.spent, r.m.Crew[id].CPU)
+		}
 	}
 }
 
@@ -210,8 +213,9 @@ func (r *run) report() (*report.Run, error) {
 	}
 	for _, m := range r.members() {
 		w := r.m.Crew[m.id]
-		out.Crew = append(out.Crew, report.Member{Name: m.hello.Name, Tiles: w.Tiles, Settled: w.Settled, Sent: w.Sent, Received: w.Received, CPU: w.CPU})
-		out.CPU += w.CPU
+		cpu := max(w.CPU-m.spent, 0)
+		out.Crew = append(out.Crew, report.Member{Name: m.hello.Name, Tiles: w.Tiles, Settled: w.Settled, Sent: w.Sent, Received: w.Received, CPU: cpu})
+		out.CPU += cpu
 		out.Peak = max(out.Peak, w.Peak)
 	}
 	out.Checks = checks(r.m.Blocks(), r.job.Options)

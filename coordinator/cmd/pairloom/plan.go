@@ -34,6 +34,7 @@ type outlook struct {
 	Truncated bool           `json:"truncated"`
 	Blocks    []blockOutlook `json:"blocks"` // in solving order
 	Memory    uint64         `json:"memory_bytes"`
+	CPU       float64        `json:"cpu_seconds"` // rough
 }
 
 // blockOutlook is one block. Columns and residual are those of its route; how many
@@ -136,6 +137,7 @@ func (f *planFlags) look(ctx context.Context, folder string, spec source.Spec, o
 		}
 		o.Blocks = append(o.Blocks, look)
 		o.Memory += bytesEntry * look.Nonzeros
+		o.CPU += plan.Seconds(look.Residual, look.Columns, look.Nonzeros)
 	}
 	return o, nil
 }
@@ -214,6 +216,6 @@ func (o *outlook) tell(w io.Writer) error {
 	if o.Truncated {
 		fmt.Fprintf(w, "The complex is cut above degree %d.\n", len(o.Cells)-2)
 	}
-	_, err := fmt.Fprintf(w, "Memory: about %d MiB.\n", o.Memory>>20)
+	_, err := fmt.Fprintf(w, "Memory: about %d MiB. Time: very roughly %.2g CPU seconds; fill-in does not show in counts.\n", o.Memory>>20, o.CPU)
 	return err
 }
