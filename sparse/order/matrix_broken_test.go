@@ -65,6 +65,16 @@ func TestMatrixRefusals(t *testing.T) {
 		out := t.TempDir()
 		_, err := Matrix(t.Context(), c.spec, out, 1, source.Quiet{})
 		require.ErrorContains(t, err, c.want, name)
+		switch name {
+		case "no file", "both flags", "absurd first degree", "nothing to claim", "too few values":
+			require.ErrorAs(t, err, new(*source.UsageError), name)
+		case "beyond the budget":
+			require.ErrorAs(t, err, new(*source.TooBig), name)
+		case "no such file":
+			require.ErrorIs(t, err, os.ErrNotExist, name)
+		default:
+			require.ErrorAs(t, err, new(*source.InputError), name)
+		}
 		require.NotContains(t, err.Error(), "\n", name)
 		require.NoFileExists(t, filepath.Join(out, "complex.json"), name)
 		left, _ := filepath.Glob(filepath.Join(out, ".*"))
@@ -102,6 +112,45 @@ func TestMatrixStops(t *testing.T) {
 	left, err := os.ReadDir(out)
 	require.NoError(t, err)
 	require.Empty(t, left)
+}
+
+// Any bytes as a chain of two: a whole complex whose blocks read back, or one error of
+// a known kind and neither complex.json nor a part.
+func FuzzMatrix(f *testing.F) {
+	const head = "%%MatrixMarket matrix coordinate integer general\n"
+	d1, d2 := head+"3 3 6\n1 1 1\n2 1 1\n1 2 1\n3 2 1\n2 3 1\n3 3 -1\n", head+"3 1 4\n1 1 1\n2 1 1\n2 1 2\n3 1 3\n"
+	f.Add([]byte(d1), []byte(d2), []byte("0\n1\n2\n"), byte(0), int8(-1), uint8(0))
+	f.Add([]byte(d1), []byte(d2), []byte("0\n0\n0\n"), byte(4), int8(0), uint8(1))
+	f.Add([]byte(d2), []byte(d1), []byte("0\n0\n0\n"), byte(1), int8(2), uint8(2))
+	f.Add([]byte(d1), []byte(head+"3 0 0\n"), []byte{}, byte(2), int8(2), uint8(3))
+	f.Add([]byte(head+"50000 1 0\n"), []byte(head+"1 50000 1\n1 7 1\n"), []byte{}, byte(2), int8(-1), uint8(0))
+	f.Fuzz(func(t *testing.T, d1, d2, values []byte, flags byte, degrees int8, first uint8) {
+		in, out := t.TempDir(), t.TempDir()
+		spec := source.Spec{Kind: source.Matrix, Degrees: max(int(degrees), -1), FacesInCols: flags&1 > 0, FacesInRows: flags&2 > 0, FirstDegree: int(first % 5), MemoryBytes: 64 << 20}
+		for name, b := range map[string][]byte{"1.mtx": d1, "2.mtx": d2, "v.csv": values} {
+			require.NoError(t, os.WriteFile(filepath.Join(in, name), b, 0o644))
+		}
+		spec.Inputs = []string{filepath.Join(in, "1.mtx"), filepath.Join(in, "2.mtx")}
+		if v := filepath.Join(in, "v.csv"); flags&4 > 0 {
+			spec.ValueFiles = []string{v, v, v}
+		}
+		c, err := Matrix(t.Context(), spec, out, 1, source.Quiet{})
+		parts, _ := filepath.Glob(filepath.Join(out, ".*"))
+		require.Empty(t, parts)
+		if err != nil {
+			require.NoFileExists(t, filepath.Join(out, "complex.json"))
+			known := errors.As(err, new(*source.InputError)) || errors.As(err, new(*source.UsageError)) || errors.As(err, new(*source.TooBig))
+			require.True(t, known, "%v", err)
+			return
+		}
+		for k, columns := range matrixBoundary(t, out, c) {
+			for j, column := range columns {
+				for i := 1; i < len(column); i++ {
+					require.Less(t, column[i-1], column[i], "column %d of block %d", j, k)
+				}
+			}
+		}
+	})
 }
 
 // The chessboard complex on 7 × 7 squares, 130,000 cells, five blocks.

@@ -1,6 +1,8 @@
 package order
 
 import (
+	"bytes"
+	"compress/gzip"
 	"encoding/csv"
 	"fmt"
 	"os"
@@ -132,6 +134,72 @@ func TestMatrixChains(t *testing.T) {
 		require.NoError(t, err)
 		require.Empty(t, left)
 	}
+}
+
+// The same folder, byte by byte, from the matrices as they are and from their
+// transposes, compressed or not, with one thread or two.
+func TestMatrixForms(t *testing.T) {
+	for seed := range uint64(20) {
+		r := gen.New(seed)
+		f := gen.Chain(r, []int{1, r.IntN(3), 1}, []int{0, 2 + r.IntN(9), r.IntN(9)}, r.IntN(6))
+		var want map[string]string
+		for form := range 4 {
+			dir, out := t.TempDir(), t.TempDir()
+			spec := matrixSpec()
+			spec.FacesInCols, spec.FacesInRows = form&1 > 0, form&1 == 0
+			for k := 1; k < len(f.Boundary); k++ {
+				rows, columns, path := len(f.Boundary[k-1]), f.Boundary[k], filepath.Join(dir, fmt.Sprintf("d%d.mtx", k))
+				if spec.FacesInCols {
+					rows, columns = len(columns), gen.Transpose(rows, columns)
+				}
+				text := []byte(matrixText(r, rows, columns))
+				if form&2 > 0 {
+					path, text = path+".gz", matrixSqueezed(t, text)
+				}
+				require.NoError(t, os.WriteFile(path, text, 0o644))
+				spec.Inputs = append(spec.Inputs, path)
+			}
+			_, err := Matrix(t.Context(), spec, out, 1+form&1, source.Quiet{})
+			require.NoError(t, err)
+			got := files(t, out)
+			if want == nil {
+				want = got
+			}
+			require.Equal(t, want, got, "seed %d, form %d", seed, form)
+		}
+	}
+}
+
+func matrixSqueezed(t *testing.T, text []byte) []byte {
+	var b bytes.Buffer
+	z := gzip.NewWriter(&b)
+	_, err := z.Write(text)
+	require.NoError(t, err)
+	require.NoError(t, z.Close())
+	return b.Bytes()
+}
+
+// With a first degree above 1 the arrays of values begin one degree below it.
+func TestMatrixFirstDegreeValues(t *testing.T) {
+	d2, out := matrixFile(t, "3 2 4", "1 1", "2 1", "2 2", "3 2"), t.TempDir()
+	spec := matrixSpec(d2)
+	spec.FirstDegree, spec.FacesInRows = 2, true
+	spec.ValueFiles = []string{valueFile(t, "1\n2\n4\n"), valueFile(t, "3\n5\n")}
+	c, err := Matrix(t.Context(), spec, out, 1, source.Quiet{})
+	require.NoError(t, err)
+	require.Equal(t, []uint32{0, 3, 2}, c.Cells)
+	require.Equal(t, 2, c.First)
+	table, err := chain.OpenTable(out)
+	require.NoError(t, err)
+	defer table.Close()
+	for k, want := range [][]float64{{}, {1, 2, 4}, {3, 5}} {
+		for j, v := range want {
+			require.Equal(t, v, table.Value(k, uint32(j)))
+		}
+	}
+	spec.ValueFiles[1] = valueFile(t, "3\n3\n")
+	_, err = Matrix(t.Context(), spec, t.TempDir(), 1, source.Quiet{})
+	require.ErrorContains(t, err, "2-cell 1 enters at 3, before its face 2 at 4")
 }
 
 // Public boundary matrices, which are stored transposed: shape, nonzeros and rank of

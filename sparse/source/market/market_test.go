@@ -89,6 +89,15 @@ func TestMatrices(t *testing.T) {
 	require.Equal(t, [2]uint32{3, 2}, shape)
 }
 
+// allocated returns the bytes that one reading took, whether it was used up or not.
+func allocated(path string) (uint64, error) {
+	var before, after runtime.MemStats
+	runtime.ReadMemStats(&before)
+	_, _, err := readAll(path)
+	runtime.ReadMemStats(&after)
+	return after.TotalAlloc - before.TotalAlloc, err
+}
+
 // Each broken file gives one line that names the place and what was expected.
 func TestBrokenMatrices(t *testing.T) {
 	long := strings.Repeat("1", lineMost+1)
@@ -111,6 +120,7 @@ func TestBrokenMatrices(t *testing.T) {
 		"negative size":            {pattern + "3 -2 1\n", "line 2: three whole numbers"},
 		"fractional size":          {pattern + "3 2.5 1\n", "line 2: three whole numbers"},
 		"absurd rows":              {pattern + "4000000000 1 1\n1 1\n", "line 2: 4000000000 rows and 1 columns; more than a file of 68 bytes can mean"},
+		"rows beyond 63 bits":      {pattern + "4000000000000000000 1 1\n1 1\n", "line 2: 4000000000000000000 rows and 1 columns; more than a file of 77 bytes"},
 		"absurd columns":           {pattern + "1 9999999999999999999 1\n1 1\n", "line 2: 1 rows and 9999999999999999999 columns; more than a file"},
 		"sizes beyond 64 bits":     {pattern + "1 99999999999999999999999 1\n1 1\n", "line 2: three whole numbers"},
 		"absurd entries":           {pattern + "5 5 999999999999\n1 1\n", "line 2: 999999999999 entries are announced; a file of 70 bytes"},
@@ -128,6 +138,7 @@ func TestBrokenMatrices(t *testing.T) {
 		"1.5":                      {real + "5 4 1\n1 1 1.5\n", `line 3: "1 1 1.5"; row column and a whole number`},
 		"1.0 in an integer matrix": {integer + "5 4 1\n1 1 1.0\n", `line 3: "1 1 1.0"; row column and a whole number`},
 		"NaN":                      {real + "5 4 1\n1 1 NaN\n", `line 3: "1 1 NaN"`},
+		"a word as a value":        {integer + "5 4 1\n1 1 one\n", `line 3: "1 1 one"; row column and a whole number`},
 		"infinite":                 {real + "5 4 1\n1 1 inf\n", `line 3: "1 1 inf"`},
 		"nearly whole":             {real + "5 4 1\n1 1 0.99999999999999999999999\n", `line 3: "1 1 0.999`},
 		"small":                    {real + "5 4 1\n1 1 1e-300\n", `line 3: "1 1 1e-300"`},
@@ -145,7 +156,8 @@ func TestBrokenMatrices(t *testing.T) {
 		"gzip, absurd rows":        {squeezed(t, pattern+"4000000000 1 1\n1 1\n"), "line 2: 4000000000 rows and 1 columns; more than a file"},
 		"gzip, rows beyond text":   {squeezed(t, pattern+"1600000 1 1\n1 1\n"), "1600000 rows and 1 columns; more than 65 bytes of text can mean"},
 	} {
-		_, _, err := readAll(write(t, c.text))
+		taken, err := allocated(write(t, c.text))
+		require.Less(t, taken, 2*uint64(len(c.text))+64<<20, name)
 		broken := new(source.InputError)
 		require.ErrorAs(t, err, &broken, name)
 		require.Contains(t, err.Error(), c.want, name)
@@ -175,6 +187,94 @@ func TestBombs(t *testing.T) {
 	require.ErrorContains(t, err, "the file ends after 1 of 4000000 entries")
 	runtime.ReadMemStats(&after)
 	require.Less(t, after.TotalAlloc-before.TotalAlloc, uint64(8<<20))
+}
+
+// Ten million zero bytes, compressed to a thousandth, are one line that never ends.
+func TestZeroBomb(t *testing.T) {
+	zeros := strings.Repeat("\x00", 10_000_000)
+	for text, want := range map[string]string{
+		zeros:                           "line 1: longer than 65536 bytes",
+		pattern + zeros:                 "line 2: longer than 65536 bytes",
+		pattern + "9 9 99999\n" + zeros: "line 3: longer than 65536 bytes",
+	} {
+		file := squeezed(t, text)
+		require.Less(t, len(file), 20_000)
+		taken, err := allocated(write(t, file))
+		require.ErrorAs(t, err, new(*source.InputError))
+		require.ErrorContains(t, err, want)
+		require.Less(t, taken, uint64(4<<20))
+	}
+}
+
+// Any bit of a compressed file may flip: the matrix stays the same or there is one
+// error. Bits that mean nothing stand in the header (10 bytes) and in the byte before
+// the length of the empty last block, 13 bytes from the end (RFC 1951, 3.2.4).
+func TestFlippedBits(t *testing.T) {
+	text := pattern + "40 40 40\n"
+	for i := range 40 {
+		text += fmt.Sprintf("%d %d\n", i+1, i*i%40+1)
+	}
+	whole := squeezed(t, text)
+	want, _, err := readAll(write(t, whole))
+	require.NoError(t, err)
+	path, failed := write(t, ""), 0
+	for at := range 8 * len(whole) {
+		b := []byte(whole)
+		b[at/8] ^= 1 << (at % 8)
+		require.NoError(t, os.WriteFile(path, b, 0o644))
+		got, _, err := readAll(path)
+		if err == nil {
+			require.True(t, at/8 < 10 || at/8 == len(whole)-13, "bit %d", at)
+			require.Equal(t, want, got)
+			continue
+		}
+		failed++
+		require.ErrorAs(t, err, new(*source.InputError), "bit %d", at)
+	}
+	require.Greater(t, failed, 8*(len(whole)-11))
+}
+
+// The bounds on sizes, exactly: 8 a byte and 2^20, of text where it is compressed; and
+// 2^32-2 in a file that is large enough for more.
+func TestSizeBounds(t *testing.T) {
+	for _, form := range []string{"%d 1 1\n1 1\n", "1 %d 1\n1 1\n"} {
+		most := uint64(len(pattern)+len(fmt.Sprintf(form, 1<<20)))*sizePerByte + slack
+		for extra, fails := range []bool{false, true} {
+			text := pattern + fmt.Sprintf(form, most+uint64(extra))
+			for _, file := range []string{text, squeezed(t, text)} {
+				_, _, err := readAll(write(t, file))
+				require.Equal(t, fails, err != nil, "%v", err)
+			}
+		}
+	}
+	r := gen.New(5)
+	noise := new(strings.Builder)
+	for range 40_000 {
+		fmt.Fprintf(noise, "%%%016x%016x\n", r.Uint64(), r.Uint64())
+	}
+	for _, form := range []string{"%d 1", "1 %d"} {
+		for size, want := range map[uint64]string{indexMost: "text can mean", indexMost + 1: "at most 2^32-2 fit"} {
+			_, _, err := readAll(write(t, squeezed(t, pattern+noise.String()+fmt.Sprintf(form, size)+" 0\n")))
+			require.ErrorContains(t, err, fmt.Sprint(size))
+			require.ErrorContains(t, err, want)
+		}
+	}
+}
+
+// Nothing is allocated by the entry: ten thousand take what ten take.
+func TestAllocations(t *testing.T) {
+	var counts [2]float64
+	for i, n := range []int{10, 10_000} {
+		path := write(t, fmt.Sprintf("%s1 1 %d\n", real, n)+strings.Repeat("1 1 -3.0e0\n", n))
+		counts[i] = testing.AllocsPerRun(5, func() {
+			r, err := Open(path)
+			for err == nil {
+				_, _, _, err = r.Next()
+			}
+			r.Close()
+		})
+	}
+	require.InDelta(t, counts[0], counts[1], 2)
 }
 
 // Boundary matrices written and read, plain and compressed.
